@@ -1,0 +1,3 @@
+__version__: str
+
+def _statuses() -> tuple[tuple[str, str, type[Exception] | None], ...]: ...
