@@ -19,7 +19,7 @@ static int execute(PyObject *module)
     return 0;
 }
 
-static int traverse(PyObject *module, visitproc visit, void *argument)
+static int traverse(PyObject *module, visitproc visit, void *arg)
 {
     lm_module_state *state = PyModule_GetState(module);
     if (state != NULL)
