@@ -40,6 +40,7 @@ core = Extension(
     depends=sorted(glob("csrc/*.h") + glob("csrc/*/*.h")),
     include_dirs=[numpy.get_include(), "csrc"],
     define_macros=[
+        ("LM_HIDDEN", "1"),
         ("NPY_NO_DEPRECATED_API", "NPY_1_7_API_VERSION"),
         ("NPY_TARGET_VERSION", "NPY_2_0_API_VERSION"),
         ("PY_ARRAY_UNIQUE_SYMBOL", "lm_numpy_array"),

@@ -2,12 +2,17 @@
 #ifndef LM_COMPILER_H
 #define LM_COMPILER_H
 
-#if defined(__GNUC__)
+/* LM_HIDDEN is set where the library is built into something else, as in the Python module, which exports nothing. */
+#if defined(__GNUC__) && !defined(LM_HIDDEN)
 #define LM_API __attribute__((visibility("default")))
+#else
+#define LM_API
+#endif
+
+#if defined(__GNUC__)
 #define LM_MUST_USE __attribute__((warn_unused_result))
 #define LM_ALWAYS_INLINE static inline __attribute__((always_inline))
 #else
-#define LM_API
 #define LM_MUST_USE
 #define LM_ALWAYS_INLINE static inline
 #endif
