@@ -25,7 +25,8 @@ def gsl_flags():
         found = re.match(r"(\d+)\.(\d+)", asked.stdout)
         if asked.returncode == 0 and found and tuple(map(int, found.groups())) >= (2, 7):
             flags = subprocess.run([command, *arguments], capture_output=True, text=True, check=True).stdout.split()
-            return ([f for f in flags if not f.startswith(("-l", "-L"))], [f for f in flags if f.startswith(("-l", "-L"))])
+            linked = [flag for flag in flags if flag.startswith(("-l", "-L"))]
+            return [flag for flag in flags if flag not in linked], linked
     raise SystemExit(NO_GSL)
 
 

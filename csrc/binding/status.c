@@ -28,7 +28,8 @@ PyObject *lm_raise(lm_status status, const lm_fault *fault)
         PyOS_snprintf(place, sizeof place, "[%zd]", (Py_ssize_t)fault->index);
     char *value = isfinite(fault->value) ? PyOS_double_to_string(fault->value, 'r', 0, 0, NULL) : NULL;
     PyErr_Format(exception_of(status), "%s%s is %s; expected %s", fault->argument, place,
-                 value != NULL ? value : isnan(fault->value) ? "nan" : fault->value > 0 ? "inf" : "-inf", fault->expected);
+                 value != NULL ? value : isnan(fault->value) ? "nan" : fault->value > 0 ? "inf" : "-inf",
+                 fault->expected);
     PyMem_Free(value);
     return NULL;
 }

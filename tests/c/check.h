@@ -22,8 +22,8 @@ static inline void check_close(double got, double wanted, double relative, const
 {
     if (!(got == wanted || fabs(got - wanted) <= relative * fabs(wanted))) {
         check_failures++;
-        fprintf(stderr, "%s:%d: failed: %s: got %.17g, wanted %.17g, relative error %.3g\n", file, line, text, got, wanted,
-                fabs(got - wanted) / fabs(wanted));
+        fprintf(stderr, "%s:%d: failed: %s: got %.17g, wanted %.17g, relative error %.3g\n", file, line, text, got,
+                wanted, fabs(got - wanted) / fabs(wanted));
     }
 }
 
