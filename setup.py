@@ -4,10 +4,12 @@ import os
 import re
 import shutil
 import subprocess
+from concurrent.futures import ThreadPoolExecutor
 from glob import glob
 
 import numpy
 from setuptools import Extension, setup
+from setuptools.command.build_ext import build_ext
 
 NO_GSL = (
     "limen needs the GNU Scientific Library, 2.7 or newer, with its headers: install libgsl-dev (Debian, Ubuntu), "
@@ -28,6 +30,21 @@ def gsl_flags():
             linked = [flag for flag in flags if flag.startswith(("-l", "-L"))]
             return [flag for flag in flags if flag not in linked], linked
     raise SystemExit(NO_GSL)
+
+
+class BuildSideBySide(build_ext):
+    """Compiles the files of the extension side by side, where setuptools goes one by one."""
+
+    def build_extensions(self):
+        compile_these = self.compiler.compile
+
+        def side_by_side(sources, *args, **kwargs):
+            with ThreadPoolExecutor(os.cpu_count()) as pool:
+                objects = pool.map(lambda source: compile_these([source], *args, **kwargs), sources)
+                return [name for names in objects for name in names]
+
+        self.compiler.compile = side_by_side
+        super().build_extensions()
 
 
 with open("csrc/limen.h", encoding="utf-8") as header:
@@ -53,4 +70,4 @@ core = Extension(
     ],
     extra_link_args=[*link_flags, "-lm", "-lpthread"],
 )
-setup(version=version, ext_modules=[core])
+setup(version=version, ext_modules=[core], cmdclass={"build_ext": BuildSideBySide})
