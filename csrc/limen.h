@@ -56,4 +56,72 @@ typedef struct {
     double high;
 } lm_range;
 
+/* ---- slice: levels applied to arrays ---------------------------------------------------------------------------
+ * The types a reading can have: name, C type. One list for kernels, loops and tests. LM_F16 is IEEE binary16, carried
+ * as its bits.
+ */
+#define LM_READINGS(X)                                                                                                 \
+    X(I8, i8, int8_t)                                                                                                  \
+    X(U8, u8, uint8_t)                                                                                                 \
+    X(I16, i16, int16_t)                                                                                               \
+    X(U16, u16, uint16_t)                                                                                              \
+    X(I32, i32, int32_t)                                                                                               \
+    X(U32, u32, uint32_t)                                                                                              \
+    X(I64, i64, int64_t)                                                                                               \
+    X(U64, u64, uint64_t)                                                                                              \
+    X(F16, f16, uint16_t)                                                                                              \
+    X(F32, f32, float)                                                                                                 \
+    X(F64, f64, double)
+
+#define LM_READING_CODE(code, name, type) LM_##code,
+typedef enum { LM_READINGS(LM_READING_CODE) LM_READING_END } lm_reading;
+#undef LM_READING_CODE
+
+#define LM_MAX_LEVELS 254 /* codes are bytes and one is kept for NaN */
+
+/* Levels made ready for one type of reading: rounded up to that type, so that x >= level decides as in exact
+ * arithmetic, and laid out for the kernels. A value: copied freely, nothing to release. */
+typedef struct {
+    const struct lm_kernels *kernels;
+    lm_reading reading;
+    uint32_t count;   /* levels that a reading of this type can reach */
+    uint32_t depth;   /* smallest depth >= 1 with 2^depth > count */
+    bool plain;       /* codes[k] == k: no labels to apply */
+    uint8_t invalid;  /* code of NaN */
+    uint8_t code[256];     /* of interval k; entries past count repeat the last */
+    uint8_t found[256];    /* the same, by the bits of the search path, first comparison lowest */
+    uint8_t table[256];    /* 8-bit readings: code of each byte */
+    _Alignas(64) uint8_t level[256 * 8]; /* of the reading's type, ascending, padded to 2^depth - 1 with its largest */
+    _Alignas(64) uint8_t node[40 * 64];  /* the levels by step of the search, a whole vector or more each */
+} lm_slicer;
+
+/* levels: ascending (equal ones leave an empty interval), no NaN, at most LM_MAX_LEVELS; codes: count + 1. On failure out
+ * holds nothing. */
+LM_API LM_MUST_USE lm_status lm_slicer_init(lm_slicer *out, lm_reading reading, const double levels[], size_t count,
+                                            const uint8_t codes[], uint8_t invalid, lm_fault *fault);
+
+/* out[i] = code of x[i], for n readings that lie stride bytes apart, aligned or not, with their bytes swapped or not;
+ * out_stride is in bytes too. x and out do not overlap. NaN compares may raise the processor's invalid flag. Cannot
+ * fail. */
+LM_API void lm_slicer_decide(const lm_slicer *slicer, const void *x, ptrdiff_t stride, bool swapped, size_t n,
+                             uint8_t *out, ptrdiff_t out_stride);
+
+/* Bytes of one reading; cannot fail. */
+LM_API size_t lm_reading_size(lm_reading reading);
+
+/* Kernels are chosen once, the best that the processor runs unless a name forces one before any use. LM_UNKNOWN when
+ * the name is none of lm_kernels_name(0..), which lists the usable ones, best first, and then NULL. */
+LM_API LM_MUST_USE lm_status lm_kernels_choose(const char *name);
+LM_API const char *lm_kernels_name(size_t index);
+LM_API const char *lm_kernels_chosen(void);
+
+/* Runs work(context, block) for every block below blocks, on this thread and threads - 1 others (fewer when the system
+ * gives fewer). stop, which may be NULL, is asked on this thread between its blocks; LM_CALLBACK when it says true. */
+typedef void lm_work(void *context, size_t block);
+typedef bool lm_stop(void *context);
+LM_API LM_MUST_USE lm_status lm_run_blocks(size_t blocks, unsigned threads, lm_work *work, lm_stop *stop, void *context);
+
+/* Processors this process may use: affinity and the quota of its control group; at least 1. Reads /proc. */
+LM_API unsigned lm_threads_available(void);
+
 #endif

@@ -1,5 +1,6 @@
 """Decision levels for scalar readings: found exactly, assessed in both tails, applied at the speed of memory."""
 
 from ._core import __version__
+from .slicing import build_info, decide
 
-__all__ = ["__version__"]
+__all__ = ["__version__", "build_info", "decide"]

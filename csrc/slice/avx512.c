@@ -1,0 +1,209 @@
+/* The searching kernels for AVX-512 with byte permutes (Ice Lake, Zen 4 and newer): every step of the search looks its
+ * level up in registers by the path so far, so cost grows with the logarithm of the number of levels.
+ *
+ * 64 readings make 64 codes. The path of a reading is one bit a step, lowest first; a permute ignores index bits above
+ * its table, so the path itself is the index of every step. Codes, labels included, are a last permute of the path.
+ */
+#include "kernels.h"
+
+#if defined(__x86_64__)
+#include <immintrin.h>
+
+#define TARGET __attribute__((target("avx512f,avx512bw,avx512dq,avx512vl,avx512vbmi")))
+#define INLINE static inline __attribute__((always_inline)) TARGET
+
+static bool usable(void)
+{
+    return __builtin_cpu_supports("avx512f") && __builtin_cpu_supports("avx512bw") && __builtin_cpu_supports("avx512dq") &&
+           __builtin_cpu_supports("avx512vl") && __builtin_cpu_supports("avx512vbmi");
+}
+
+/* ---- codes of 64 paths ---- */
+
+typedef struct {
+    __m512i part[4];
+} map;
+
+INLINE map map_of(const uint8_t from[256])
+{
+    return (map){{_mm512_loadu_si512(from), _mm512_loadu_si512(from + 64), _mm512_loadu_si512(from + 128),
+                  _mm512_loadu_si512(from + 192)}};
+}
+
+INLINE __m512i mapped(const map *m, __m512i path, int depth)
+{
+    if (depth <= 6)
+        return _mm512_permutexvar_epi8(path, m->part[0]);
+    __m512i low = _mm512_permutex2var_epi8(m->part[0], path, m->part[1]);
+    if (depth <= 7)
+        return low;
+    __m512i high = _mm512_permutex2var_epi8(m->part[2], path, m->part[3]);
+    return _mm512_mask_blend_epi8(_mm512_movepi8_mask(path), low, high);
+}
+
+/* ---- lanes of 16, 32 and 64 bits: what differs ---- */
+
+/* 64 paths in 2, 4 or 8 vectors to 64 bytes in order; paths are below 256, so the saturation of the packs never acts. */
+INLINE __m512i pack_16(const __m512i p[2])
+{
+    const __m512i order = _mm512_setr_epi64(0, 2, 4, 6, 1, 3, 5, 7);
+    return _mm512_permutexvar_epi64(order, _mm512_packus_epi16(p[0], p[1]));
+}
+
+INLINE __m512i pack_32(const __m512i p[4])
+{
+    const __m512i order = _mm512_setr_epi32(0, 4, 8, 12, 1, 5, 9, 13, 2, 6, 10, 14, 3, 7, 11, 15);
+    __m512i packed = _mm512_packus_epi16(_mm512_packus_epi32(p[0], p[1]), _mm512_packus_epi32(p[2], p[3]));
+    return _mm512_permutexvar_epi32(order, packed);
+}
+
+INLINE __m512i pack_64(const __m512i p[8])
+{
+    const __m512i even = _mm512_setr_epi32(0, 2, 4, 6, 8, 10, 12, 14, 16, 18, 20, 22, 24, 26, 28, 30);
+    __m512i half[4];
+    for (int r = 0; r < 4; r++)
+        half[r] = _mm512_permutex2var_epi32(p[2 * r], even, p[2 * r + 1]);
+    return pack_32(half);
+}
+
+typedef short type_16;
+typedef int type_32;
+typedef long long type_64;
+
+#define LOOKUP(bits)                                                                                                   \
+    /* the entry of a table of `vectors` registers that the low bits of each path name */                             \
+    INLINE __m512i lookup_##bits(const uint8_t *node, int vectors, __m512i path)                                       \
+    {                                                                                                                  \
+        __m512i entry[8];                                                                                              \
+        if (vectors == 1)                                                                                              \
+            return _mm512_permutexvar_epi##bits(path, _mm512_load_si512(node));                                        \
+        for (int v = 0; v < vectors / 2; v++)                                                                          \
+            entry[v] = _mm512_permutex2var_epi##bits(_mm512_load_si512(node + 128 * v), path,                          \
+                                                     _mm512_load_si512(node + 128 * v + 64));                          \
+        int bit = 2 * (512 / bits);                                                                                    \
+        for (int left = vectors / 2; left > 1; left /= 2, bit *= 2)                                                    \
+            for (int v = 0; v < left / 2; v++)                                                                         \
+                entry[v] = _mm512_mask_blend_epi##bits(_mm512_test_epi##bits##_mask(path, _mm512_set1_epi##bits((type_##bits)bit)), \
+                                                       entry[2 * v], entry[2 * v + 1]);                                \
+        return entry[0];                                                                                               \
+    }
+LOOKUP(16)
+LOOKUP(32)
+LOOKUP(64)
+
+/* ---- kernels ---- */
+
+#define GE_I(bits, x, level) _mm512_cmpge_epi##bits##_mask(x, level)
+#define GE_U(bits, x, level) _mm512_cmpge_epu##bits##_mask(x, level)
+#define GE_F(bits, x, level) _mm512_cmp_ps_mask(_mm512_castsi512_ps(x), _mm512_castsi512_ps(level), _CMP_GE_OQ)
+#define GE_D(bits, x, level) _mm512_cmp_pd_mask(_mm512_castsi512_pd(x), _mm512_castsi512_pd(level), _CMP_GE_OQ)
+#define AS_IS(x) (x)
+#define F16_KEY(x) _mm512_xor_si512(x, _mm512_and_si512(_mm512_srai_epi16(x, 15), _mm512_set1_epi16(0x7fff)))
+#define NAN_NEVER(x) 0
+#define NAN_F16(x)                                                                                                     \
+    _mm512_cmpgt_epi16_mask(_mm512_and_si512(x, _mm512_set1_epi16(0x7fff)), _mm512_set1_epi16(LM_F16_INFINITY))
+#define NAN_F(x) _mm512_cmp_ps_mask(_mm512_castsi512_ps(x), _mm512_castsi512_ps(x), _CMP_UNORD_Q)
+#define NAN_D(x) _mm512_cmp_pd_mask(_mm512_castsi512_pd(x), _mm512_castsi512_pd(x), _CMP_UNORD_Q)
+
+/* name, type, bits of a lane, comparison, lift to what is compared, mask of NaN, can NaN occur */
+#define KERNEL(name, type, bits, GE, LIFT, NAN_OF, may_be_nan)                                                         \
+    INLINE __m512i codes_##name(const lm_slicer *s, const map *m, __m512i invalid, const __m512i x[bits / 8],          \
+                                int depth)                                                                             \
+    {                                                                                                                  \
+        __m512i path[bits / 8];                                                                                        \
+        uint64_t lost = 0;                                                                                             \
+        _Pragma("GCC unroll 8") for (int r = 0; r < bits / 8; r++)                                                     \
+        {                                                                                                              \
+            const __m512i key = LIFT(x[r]);                                                                            \
+            path[r] = _mm512_maskz_set1_epi##bits(GE(bits, key, _mm512_load_si512(s->node)), 1);                       \
+            _Pragma("GCC unroll 8") for (int step = 1; step < depth; step++)                                           \
+            {                                                                                                          \
+                int vectors = (bits / 8 << step) <= 64 ? 1 : (bits / 8 << step) / 64;                                  \
+                __m512i level = lookup_##bits(s->node + lm_node_offset((uint32_t)step, bits / 8), vectors, path[r]);   \
+                path[r] = _mm512_mask_add_epi##bits(path[r], GE(bits, key, level), path[r],                             \
+                                                   _mm512_set1_epi##bits((type_##bits)1 << step));                     \
+            }                                                                                                          \
+            lost |= (uint64_t)NAN_OF(x[r]) << (r * (512 / bits) & 63);                                                 \
+        }                                                                                                              \
+        __m512i codes = mapped(m, pack_##bits(path), depth);                                                           \
+        return may_be_nan ? _mm512_mask_mov_epi8(codes, lost, invalid) : codes;                                        \
+    }                                                                                                                  \
+                                                                                                                       \
+    INLINE void run_##name(const lm_slicer *s, const uint8_t *x, size_t n, uint8_t out[], int depth)                   \
+    {                                                                                                                  \
+        const map m = map_of(s->found);                                                                                \
+        const __m512i invalid = _mm512_set1_epi8((char)s->invalid);                                                    \
+        __m512i v[bits / 8];                                                                                           \
+        size_t i = 0;                                                                                                  \
+        for (; i + 64 <= n; i += 64) {                                                                                 \
+            for (int r = 0; r < bits / 8; r++)                                                                         \
+                v[r] = _mm512_loadu_si512(x + i * (bits / 8) + 64 * r);                                                \
+            _mm512_storeu_si512(out + i, codes_##name(s, &m, invalid, v, depth));                                      \
+        }                                                                                                              \
+        if (i < n) {                                                                                                   \
+            size_t left = (n - i) * (bits / 8); /* bytes; a masked load touches no others */                           \
+            for (size_t r = 0; r < bits / 8; r++) {                                                                    \
+                size_t here = left <= 64 * r ? 0 : left - 64 * r >= 64 ? 64 : left - 64 * r;                           \
+                v[r] = _mm512_maskz_loadu_epi8(here == 64 ? ~0ull : (1ull << here) - 1,                                \
+                                               here == 0 ? x : x + i * (bits / 8) + 64 * r);                           \
+            }                                                                                                          \
+            _mm512_mask_storeu_epi8(out + i, (1ull << (n - i)) - 1, codes_##name(s, &m, invalid, v, depth));           \
+        }                                                                                                              \
+    }                                                                                                                  \
+                                                                                                                       \
+    TARGET static void decide_##name(const lm_slicer *s, const void *x, size_t n, uint8_t out[])                       \
+    {                                                                                                                  \
+        switch (s->depth) {                                                                                            \
+        case 1:                                                                                                        \
+            run_##name(s, x, n, out, 1);                                                                               \
+            break;                                                                                                     \
+        case 2:                                                                                                        \
+            run_##name(s, x, n, out, 2);                                                                               \
+            break;                                                                                                     \
+        case 3:                                                                                                        \
+            run_##name(s, x, n, out, 3);                                                                               \
+            break;                                                                                                     \
+        case 4:                                                                                                        \
+            run_##name(s, x, n, out, 4);                                                                               \
+            break;                                                                                                     \
+        case 5:                                                                                                        \
+            run_##name(s, x, n, out, 5);                                                                               \
+            break;                                                                                                     \
+        case 6:                                                                                                        \
+            run_##name(s, x, n, out, 6);                                                                               \
+            break;                                                                                                     \
+        case 7:                                                                                                        \
+            run_##name(s, x, n, out, 7);                                                                               \
+            break;                                                                                                     \
+        default:                                                                                                       \
+            run_##name(s, x, n, out, 8);                                                                               \
+        }                                                                                                              \
+    }
+KERNEL(i16, int16_t, 16, GE_I, AS_IS, NAN_NEVER, false)
+KERNEL(u16, uint16_t, 16, GE_U, AS_IS, NAN_NEVER, false)
+KERNEL(i32, int32_t, 32, GE_I, AS_IS, NAN_NEVER, false)
+KERNEL(u32, uint32_t, 32, GE_U, AS_IS, NAN_NEVER, false)
+KERNEL(i64, int64_t, 64, GE_I, AS_IS, NAN_NEVER, false)
+KERNEL(u64, uint64_t, 64, GE_U, AS_IS, NAN_NEVER, false)
+KERNEL(f16, uint16_t, 16, GE_I, F16_KEY, NAN_F16, true)
+KERNEL(f32, float, 32, GE_F, AS_IS, NAN_F, true)
+KERNEL(f64, double, 64, GE_D, AS_IS, NAN_D, true)
+
+/* A byte has 256 values: its code is one look-up, whatever the levels. */
+TARGET static void decide_bytes(const lm_slicer *s, const void *readings, size_t n, uint8_t out[])
+{
+    const uint8_t *x = readings;
+    const map m = map_of(s->table);
+    size_t i = 0;
+    for (; i + 64 <= n; i += 64)
+        _mm512_storeu_si512(out + i, mapped(&m, _mm512_loadu_si512(x + i), 8));
+    __mmask64 rest = (1ull << (n - i)) - 1;
+    _mm512_mask_storeu_epi8(out + i, rest, mapped(&m, _mm512_maskz_loadu_epi8(rest, x + i), 8));
+}
+#define decide_i8 decide_bytes
+#define decide_u8 decide_bytes
+
+#define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
+const lm_kernels lm_kernels_avx512 = {
+    .name = "avx512", .usable = usable, .searches = true, .decide = {LM_READINGS(LM_SLOT)}};
+#endif

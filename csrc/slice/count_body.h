@@ -1,0 +1,140 @@
+/* The body of the counting kernels: which levels does each reading not reach, some vectors at a time.
+ *
+ * Included once for each instruction set, with LM_VECTOR (bytes of a register), LM_TARGET (function attribute) and
+ * LM_SET (name of the struct of kernels) defined. Few levels are compared one after the other, and each takes away the
+ * step between the two codes it parts, so labels cost one instruction more and no second pass. Many levels are
+ * searched, several readings side by side.
+ */
+#define INLINE static inline __attribute__((always_inline)) LM_TARGET
+#define LANES(type) (LM_VECTOR / sizeof(type))
+
+enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 /* readings searched side by side */ };
+
+/* name; type of reading; lane: signed integer as wide; key: what is compared; kept: type of the slicer's levels; LIFT and
+ * LIFT_ONE: reading to key; LEVEL: kept level to key; IS_NAN: vector to mask */
+#define KERNEL(name, type, lane, key, kept, LIFT, LIFT_ONE, LEVEL, IS_NAN, IS_NAN_ONE)                                 \
+    typedef type vec_##name __attribute__((vector_size(LM_VECTOR), aligned(sizeof(type)), may_alias));                 \
+    typedef lane lanes_##name __attribute__((vector_size(LM_VECTOR)));                                                 \
+    typedef key keys_##name __attribute__((vector_size(LM_VECTOR)));                                                   \
+    typedef uint8_t bytes_##name __attribute__((vector_size(LANES(type)), aligned(1), may_alias));                     \
+                                                                                                                       \
+    /* LM_VECTOR readings; plain: every step is 1 */                                                                   \
+    INLINE void block_##name(const type *x, const key level[], const lane step[], size_t count, lane last,             \
+                             lane invalid, bool plain, uint8_t out[])                                                  \
+    {                                                                                                                  \
+        keys_##name v[sizeof(type)];                                                                                   \
+        lanes_##name sum[sizeof(type)];                                                                                \
+        _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
+        {                                                                                                              \
+            v[r] = LIFT(name, *(const vec_##name *)(x + r * LANES(type)));                                             \
+            sum[r] = (lanes_##name){0} + last;                                                                         \
+        }                                                                                                              \
+        for (size_t j = 0; j < count; j++)                                                                             \
+            _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                          \
+            {                                                                                                          \
+                lanes_##name below = v[r] < level[j];                                                                  \
+                sum[r] += plain ? below : below & step[j];                                                             \
+            }                                                                                                          \
+        _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
+        {                                                                                                              \
+            lanes_##name lost = IS_NAN(name, *(const vec_##name *)(x + r * LANES(type)));                              \
+            sum[r] = (sum[r] & ~lost) | (lost & invalid);                                                              \
+            *(bytes_##name *)(out + r * LANES(type)) = __builtin_convertvector(sum[r], bytes_##name);                  \
+        }                                                                                                              \
+    }                                                                                                                  \
+                                                                                                                       \
+    INLINE void count_##name(const lm_slicer *s, const type *x, size_t n, uint8_t out[], bool plain)                   \
+    {                                                                                                                  \
+        key level[COUNTED];                                                                                            \
+        lane step[COUNTED];                                                                                            \
+        const kept *stored = (const void *)s->level;                                                                   \
+        for (size_t j = 0; j < s->count; j++) {                                                                        \
+            level[j] = LEVEL(name, stored[j]);                                                                         \
+            step[j] = (lane)(s->code[j] - s->code[j + 1]);                                                             \
+        }                                                                                                              \
+        lane last = (lane)s->code[s->count];                                                                           \
+        lane invalid = (lane)s->invalid;                                                                               \
+        size_t i = 0;                                                                                                  \
+        for (; i + LM_VECTOR <= n; i += LM_VECTOR)                                                                     \
+            block_##name(x + i, level, step, s->count, last, invalid, plain, out + i);                                 \
+        if (i < n) {                                                                                                   \
+            type rest[LM_VECTOR] = {0};                                                                                \
+            uint8_t codes[LM_VECTOR];                                                                                  \
+            memcpy(rest, x + i, (n - i) * sizeof(type));                                                               \
+            block_##name(rest, level, step, s->count, last, invalid, plain, codes);                                    \
+            memcpy(out + i, codes, n - i);                                                                             \
+        }                                                                                                              \
+    }                                                                                                                  \
+                                                                                                                       \
+    INLINE void search_##name(const lm_slicer *s, const type *x, size_t n, uint8_t out[])                              \
+    {                                                                                                                  \
+        const kept *level = (const void *)s->level;                                                                    \
+        size_t i = 0;                                                                                                  \
+        for (; i + ABREAST <= n; i += ABREAST) {                                                                       \
+            size_t k[ABREAST] = {0};                                                                                   \
+            for (size_t half = (size_t)1 << (s->depth - 1); half > 0; half >>= 1)                                      \
+                _Pragma("GCC unroll 8") for (size_t r = 0; r < ABREAST; r++)                                           \
+                    k[r] += LIFT_ONE(name, x[i + r]) >= LEVEL(name, level[k[r] + half - 1]) ? half : 0;                \
+            for (size_t r = 0; r < ABREAST; r++)                                                                       \
+                out[i + r] = IS_NAN_ONE(x[i + r]) ? s->invalid : s->code[k[r]];                                        \
+        }                                                                                                              \
+        for (; i < n; i++) {                                                                                           \
+            size_t k = 0;                                                                                              \
+            for (size_t half = (size_t)1 << (s->depth - 1); half > 0; half >>= 1)                                      \
+                k += LIFT_ONE(name, x[i]) >= LEVEL(name, level[k + half - 1]) ? half : 0;                              \
+            out[i] = IS_NAN_ONE(x[i]) ? s->invalid : s->code[k];                                                       \
+        }                                                                                                              \
+    }                                                                                                                  \
+                                                                                                                       \
+    LM_TARGET static void decide_##name(const lm_slicer *s, const void *x, size_t n, uint8_t out[])                    \
+    {                                                                                                                  \
+        if (s->count > COUNTED && sizeof(type) == 1)                                                                   \
+            for (size_t i = 0; i < n; i++)                                                                             \
+                out[i] = s->table[((const uint8_t *)x)[i]];                                                            \
+        else if (s->count > COUNTED)                                                                                   \
+            search_##name(s, x, n, out);                                                                               \
+        else if (s->plain)                                                                                             \
+            count_##name(s, x, n, out, true);                                                                          \
+        else                                                                                                           \
+            count_##name(s, x, n, out, false);                                                                         \
+    }
+
+/* Signed integers and floats compare as they are; unsigned ones with the top bit turned over, since registers compare
+ * signed; binary16 by its key. */
+#define AS_KEY(name, v) ((keys_##name)(v))
+#define AS_IS_ONE(name, x) (x)
+#define TOP(name) ((lanes_##name){0} + (lane_##name)((ulane_##name)1 << (8 * sizeof(lane_##name) - 1)))
+#define TURNED(name, v) ((keys_##name)((lanes_##name)(v) ^ TOP(name)))
+#define TURNED_ONE(name, x) ((lane_##name)((x) ^ (ulane_##name)((ulane_##name)1 << (8 * sizeof(lane_##name) - 1))))
+#define F16_KEY(name, v) ((keys_##name)((lanes_##name)(v) ^ (((lanes_##name)(v) >> 15) & 0x7fff)))
+#define NEVER(name, v) ((lanes_##name){0})
+#define NEVER_ONE(x) false
+#define UNEQUAL(name, v) ((v) != (v))
+#define UNEQUAL_ONE(x) ((x) != (x))
+#define F16_NAN(name, v) (((lanes_##name)(v) & 0x7fff) > LM_F16_INFINITY)
+#define F16_NAN_ONE(x) (((x) & 0x7fff) > LM_F16_INFINITY)
+typedef int8_t lane_u8;
+typedef uint8_t ulane_u8;
+typedef int16_t lane_u16;
+typedef uint16_t ulane_u16;
+typedef int32_t lane_u32;
+typedef uint32_t ulane_u32;
+typedef int64_t lane_u64;
+typedef uint64_t ulane_u64;
+
+#define F16_LIFT_ONE(name, x) lm_f16_key(x)
+
+KERNEL(i8, int8_t, int8_t, int8_t, int8_t, AS_KEY, AS_IS_ONE, AS_IS_ONE, NEVER, NEVER_ONE)
+KERNEL(u8, uint8_t, int8_t, int8_t, uint8_t, TURNED, TURNED_ONE, TURNED_ONE, NEVER, NEVER_ONE)
+KERNEL(i16, int16_t, int16_t, int16_t, int16_t, AS_KEY, AS_IS_ONE, AS_IS_ONE, NEVER, NEVER_ONE)
+KERNEL(u16, uint16_t, int16_t, int16_t, uint16_t, TURNED, TURNED_ONE, TURNED_ONE, NEVER, NEVER_ONE)
+KERNEL(i32, int32_t, int32_t, int32_t, int32_t, AS_KEY, AS_IS_ONE, AS_IS_ONE, NEVER, NEVER_ONE)
+KERNEL(u32, uint32_t, int32_t, int32_t, uint32_t, TURNED, TURNED_ONE, TURNED_ONE, NEVER, NEVER_ONE)
+KERNEL(i64, int64_t, int64_t, int64_t, int64_t, AS_KEY, AS_IS_ONE, AS_IS_ONE, NEVER, NEVER_ONE)
+KERNEL(u64, uint64_t, int64_t, int64_t, uint64_t, TURNED, TURNED_ONE, TURNED_ONE, NEVER, NEVER_ONE)
+KERNEL(f16, uint16_t, int16_t, int16_t, int16_t, F16_KEY, F16_LIFT_ONE, AS_IS_ONE, F16_NAN, F16_NAN_ONE)
+KERNEL(f32, float, int32_t, float, float, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL, UNEQUAL_ONE)
+KERNEL(f64, double, int64_t, double, double, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL, UNEQUAL_ONE)
+
+#define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
+const lm_kernels LM_SET = {.name = LM_SET_NAME, .usable = usable, .decide = {LM_READINGS(LM_SLOT)}};

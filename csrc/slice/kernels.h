@@ -1,0 +1,44 @@
+/* What a set of kernels provides. One struct an instruction set, one best-first list, one body each. */
+#ifndef LM_KERNELS_H
+#define LM_KERNELS_H
+
+#include "../limen.h"
+
+/* The codes of n contiguous, aligned readings of the slicer's type. */
+typedef void lm_decide_kernel(const lm_slicer *slicer, const void *x, size_t n, uint8_t out[]);
+
+typedef struct lm_kernels {
+    const char *name;
+    bool (*usable)(void);
+    bool searches; /* uses lm_slicer.node and lm_slicer.found */
+    lm_decide_kernel *decide[LM_READING_END];
+} lm_kernels;
+
+extern const lm_kernels lm_kernels_portable;
+extern const lm_kernels lm_kernels_baseline;
+extern const lm_kernels lm_kernels_avx2;
+extern const lm_kernels lm_kernels_avx512;
+
+/* The chosen set; the best usable one is chosen by the first call. */
+const lm_kernels *lm_kernels_get(void);
+
+/* binary16 bits to an integer that orders as the values do, -0 just below +0, NaN outside +-LM_F16_INFINITY. */
+#define LM_F16_INFINITY 0x7c00
+
+static inline int16_t lm_f16_key(uint16_t bits)
+{
+    return (int16_t)(bits ^ (uint16_t)((0u - (unsigned)(bits >> 15)) & 0x7fffu));
+}
+
+/* Steps of a search keep their nodes at whole 64-byte vectors: the first vector of a step, for lanes of this size. */
+static inline size_t lm_node_offset(uint32_t step, size_t size)
+{
+    size_t offset = 0;
+    for (uint32_t s = 0; s < step; s++) {
+        size_t bytes = size << s;
+        offset += bytes < 64 ? 64 : bytes;
+    }
+    return offset;
+}
+
+#endif

@@ -1,0 +1,40 @@
+/* Kernels in plain C, for any compiler and processor: a branchless binary search, one reading at a time. */
+#include "kernels.h"
+
+#define SEARCH_BODY(name, type, key_type, KEY, IS_NAN)                                                                 \
+    static void decide_##name(const lm_slicer *slicer, const void *readings, size_t n, uint8_t out[])                  \
+    {                                                                                                                  \
+        const type *x = readings;                                                                                      \
+        const key_type *level = (const void *)slicer->level;                                                           \
+        for (size_t i = 0; i < n; i++) {                                                                               \
+            const key_type key = KEY(x[i]);                                                                            \
+            size_t k = 0;                                                                                              \
+            for (size_t half = (size_t)1 << (slicer->depth - 1); half > 0; half >>= 1)                                 \
+                k += key >= level[k + half - 1] ? half : 0;                                                            \
+            out[i] = IS_NAN(x[i]) ? slicer->invalid : slicer->code[k];                                                 \
+        }                                                                                                              \
+    }
+#define AS_IS(x) (x)
+#define NEVER(x) false
+#define UNEQUAL(x) ((x) != (x))
+#define F16_NAN(x) (((x) & 0x7fff) > LM_F16_INFINITY)
+
+SEARCH_BODY(i8, int8_t, int8_t, AS_IS, NEVER)
+SEARCH_BODY(u8, uint8_t, uint8_t, AS_IS, NEVER)
+SEARCH_BODY(i16, int16_t, int16_t, AS_IS, NEVER)
+SEARCH_BODY(u16, uint16_t, uint16_t, AS_IS, NEVER)
+SEARCH_BODY(i32, int32_t, int32_t, AS_IS, NEVER)
+SEARCH_BODY(u32, uint32_t, uint32_t, AS_IS, NEVER)
+SEARCH_BODY(i64, int64_t, int64_t, AS_IS, NEVER)
+SEARCH_BODY(u64, uint64_t, uint64_t, AS_IS, NEVER)
+SEARCH_BODY(f16, uint16_t, int16_t, lm_f16_key, F16_NAN)
+SEARCH_BODY(f32, float, float, AS_IS, UNEQUAL)
+SEARCH_BODY(f64, double, double, AS_IS, UNEQUAL)
+
+static bool usable(void)
+{
+    return true;
+}
+
+#define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
+const lm_kernels lm_kernels_portable = {.name = "portable", .usable = usable, .decide = {LM_READINGS(LM_SLOT)}};
