@@ -61,16 +61,8 @@ typedef struct {
  * as its bits.
  */
 #define LM_READINGS(X)                                                                                                 \
-    X(I8, i8, int8_t)                                                                                                  \
-    X(U8, u8, uint8_t)                                                                                                 \
-    X(I16, i16, int16_t)                                                                                               \
-    X(U16, u16, uint16_t)                                                                                              \
-    X(I32, i32, int32_t)                                                                                               \
-    X(U32, u32, uint32_t)                                                                                              \
-    X(I64, i64, int64_t)                                                                                               \
-    X(U64, u64, uint64_t)                                                                                              \
-    X(F16, f16, uint16_t)                                                                                              \
-    X(F32, f32, float)                                                                                                 \
+    X(I8, i8, int8_t) X(U8, u8, uint8_t) X(I16, i16, int16_t) X(U16, u16, uint16_t) X(I32, i32, int32_t)               \
+    X(U32, u32, uint32_t) X(I64, i64, int64_t) X(U64, u64, uint64_t) X(F16, f16, uint16_t) X(F32, f32, float)          \
     X(F64, f64, double)
 
 #define LM_READING_CODE(code, name, type) LM_##code,
@@ -95,8 +87,8 @@ typedef struct {
     _Alignas(64) uint8_t node[40 * 64];  /* the levels by step of the search, a whole vector or more each */
 } lm_slicer;
 
-/* levels: ascending (equal ones leave an empty interval), no NaN, at most LM_MAX_LEVELS; codes: count + 1. On failure out
- * holds nothing. */
+/* levels: ascending (equal ones leave an empty interval), no NaN, at most LM_MAX_LEVELS; codes: count + 1. On failure
+ * out holds nothing. */
 LM_API LM_MUST_USE lm_status lm_slicer_init(lm_slicer *out, lm_reading reading, const double levels[], size_t count,
                                             const uint8_t codes[], uint8_t invalid, lm_fault *fault);
 
@@ -115,11 +107,13 @@ LM_API LM_MUST_USE lm_status lm_kernels_choose(const char *name);
 LM_API const char *lm_kernels_name(size_t index);
 LM_API const char *lm_kernels_chosen(void);
 
-/* Runs work(context, block) for every block below blocks, on this thread and threads - 1 others (fewer when the system
- * gives fewer). stop, which may be NULL, is asked on this thread between its blocks; LM_CALLBACK when it says true. */
+/* Runs work(context, block) for every block below blocks, on this thread and threads - 1 others (fewer when the
+ * system gives fewer). stop, which may be NULL, is asked on this thread between its blocks; LM_CALLBACK when it says
+ * true. */
 typedef void lm_work(void *context, size_t block);
 typedef bool lm_stop(void *context);
-LM_API LM_MUST_USE lm_status lm_run_blocks(size_t blocks, unsigned threads, lm_work *work, lm_stop *stop, void *context);
+LM_API LM_MUST_USE lm_status lm_run_blocks(size_t blocks, unsigned threads, lm_work *work, lm_stop *stop,
+                                           void *context);
 
 /* Processors this process may use: affinity and the quota of its control group; at least 1. Reads /proc. */
 LM_API unsigned lm_threads_available(void);

@@ -112,7 +112,8 @@ static int add_decide(PyObject *module)
 
 /* ---- arrays of any layout, with threads ---- */
 
-/* Between blocks the calling thread takes the GIL back, at most twenty times a second, to see whether Ctrl-C was hit. */
+/* Between blocks the calling thread takes the GIL back, at most twenty times a second, to see whether Ctrl-C was hit.
+ */
 typedef struct {
     PyThreadState *saved;
     struct timespec asked;
@@ -215,7 +216,8 @@ static int decide_runs(PyArrayObject *x, PyArrayObject *out, decide_run *run, un
 }
 
 /* Levels and codes from Python objects into a slicer for the readings of x; -1 with an error set. */
-static int slicer_from(PyArrayObject *x, PyObject *levels_object, PyObject *codes_object, int invalid, lm_slicer *slicer)
+static int slicer_from(PyArrayObject *x, PyObject *levels_object, PyObject *codes_object, int invalid,
+                       lm_slicer *slicer)
 {
     lm_reading reading = reading_of(PyArray_TYPE(x));
     if (reading == LM_READING_END) {

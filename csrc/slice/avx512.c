@@ -14,8 +14,9 @@
 
 static bool usable(void)
 {
-    return __builtin_cpu_supports("avx512f") && __builtin_cpu_supports("avx512bw") && __builtin_cpu_supports("avx512dq") &&
-           __builtin_cpu_supports("avx512vl") && __builtin_cpu_supports("avx512vbmi");
+    return __builtin_cpu_supports("avx512f") && __builtin_cpu_supports("avx512bw") &&
+           __builtin_cpu_supports("avx512dq") && __builtin_cpu_supports("avx512vl") &&
+           __builtin_cpu_supports("avx512vbmi");
 }
 
 /* ---- codes of 64 paths ---- */
@@ -43,7 +44,8 @@ INLINE __m512i mapped(const map *m, __m512i path, int depth)
 
 /* ---- lanes of 16, 32 and 64 bits: what differs ---- */
 
-/* 64 paths in 2, 4 or 8 vectors to 64 bytes in order; paths are below 256, so the saturation of the packs never acts. */
+/* 64 paths in 2, 4 or 8 vectors to 64 bytes in order; paths are below 256, so the saturation of the packs never acts.
+ */
 INLINE __m512i pack_16(const __m512i p[2])
 {
     const __m512i order = _mm512_setr_epi64(0, 2, 4, 6, 1, 3, 5, 7);
@@ -71,7 +73,7 @@ typedef int type_32;
 typedef long long type_64;
 
 #define LOOKUP(bits)                                                                                                   \
-    /* the entry of a table of `vectors` registers that the low bits of each path name */                             \
+    /* the entry of a table of `vectors` registers that the low bits of each path name */                              \
     INLINE __m512i lookup_##bits(const uint8_t *node, int vectors, __m512i path)                                       \
     {                                                                                                                  \
         __m512i entry[8];                                                                                              \
@@ -83,8 +85,9 @@ typedef long long type_64;
         int bit = 2 * (512 / bits);                                                                                    \
         for (int left = vectors / 2; left > 1; left /= 2, bit *= 2)                                                    \
             for (int v = 0; v < left / 2; v++)                                                                         \
-                entry[v] = _mm512_mask_blend_epi##bits(_mm512_test_epi##bits##_mask(path, _mm512_set1_epi##bits((type_##bits)bit)), \
-                                                       entry[2 * v], entry[2 * v + 1]);                                \
+                entry[v] = _mm512_mask_blend_epi##bits(                                                                \
+                    _mm512_test_epi##bits##_mask(path, _mm512_set1_epi##bits((type_##bits)bit)), entry[2 * v],         \
+                    entry[2 * v + 1]);                                                                                 \
         return entry[0];                                                                                               \
     }
 LOOKUP(16)
@@ -120,8 +123,8 @@ LOOKUP(64)
             {                                                                                                          \
                 int vectors = (bits / 8 << step) <= 64 ? 1 : (bits / 8 << step) / 64;                                  \
                 __m512i level = lookup_##bits(s->node + lm_node_offset((uint32_t)step, bits / 8), vectors, path[r]);   \
-                path[r] = _mm512_mask_add_epi##bits(path[r], GE(bits, key, level), path[r],                             \
-                                                   _mm512_set1_epi##bits((type_##bits)1 << step));                     \
+                path[r] = _mm512_mask_add_epi##bits(path[r], GE(bits, key, level), path[r],                            \
+                                                    _mm512_set1_epi##bits((type_##bits)1 << step));                    \
             }                                                                                                          \
             lost |= (uint64_t)NAN_OF(x[r]) << (r * (512 / bits) & 63);                                                 \
         }                                                                                                              \

@@ -10,8 +10,8 @@
 
 enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 /* readings searched side by side */ };
 
-/* name; type of reading; lane: signed integer as wide; key: what is compared; kept: type of the slicer's levels; LIFT and
- * LIFT_ONE: reading to key; LEVEL: kept level to key; IS_NAN: vector to mask */
+/* name; type of reading; lane: signed integer as wide; key: what is compared; kept: type of the slicer's levels; LIFT
+ * and LIFT_ONE: reading to key; LEVEL: kept level to key; IS_NAN: vector to mask */
 #define KERNEL(name, type, lane, key, kept, LIFT, LIFT_ONE, LEVEL, IS_NAN, IS_NAN_ONE)                                 \
     typedef type vec_##name __attribute__((vector_size(LM_VECTOR), aligned(sizeof(type)), may_alias));                 \
     typedef lane lanes_##name __attribute__((vector_size(LM_VECTOR)));                                                 \
@@ -73,8 +73,8 @@ enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 
         for (; i + ABREAST <= n; i += ABREAST) {                                                                       \
             size_t k[ABREAST] = {0};                                                                                   \
             for (size_t half = (size_t)1 << (s->depth - 1); half > 0; half >>= 1)                                      \
-                _Pragma("GCC unroll 8") for (size_t r = 0; r < ABREAST; r++)                                           \
-                    k[r] += LIFT_ONE(name, x[i + r]) >= LEVEL(name, level[k[r] + half - 1]) ? half : 0;                \
+                _Pragma("GCC unroll 8") for (size_t r = 0; r < ABREAST; r++) k[r] +=                                   \
+                    LIFT_ONE(name, x[i + r]) >= LEVEL(name, level[k[r] + half - 1]) ? half : 0;                        \
             for (size_t r = 0; r < ABREAST; r++)                                                                       \
                 out[i + r] = IS_NAN_ONE(x[i + r]) ? s->invalid : s->code[k[r]];                                        \
         }                                                                                                              \

@@ -30,7 +30,7 @@ size_t lm_reading_size(lm_reading reading)
     }                                                                                                                  \
     static void largest_##name(void *out)                                                                              \
     {                                                                                                                  \
-        type value = (max);                                                                                                    \
+        type value = (max);                                                                                            \
         memcpy(out, &value, sizeof value);                                                                             \
     }
 CEILING_OF_INTEGER(i8, int8_t, -0x1p7, 0x1p7, INT8_MAX)
@@ -86,7 +86,7 @@ static bool ceiling_f16(double level, void *out)
         bits = 0;
     } else {
         int exponent = 0;
-        frexp(size, &exponent);                      /* size < 2^exponent */
+        frexp(size, &exponent);                          /* size < 2^exponent */
         int step = exponent > -14 ? exponent - 11 : -24; /* of the grid that size lies on */
         double units = ldexp(size, -step);
         units = down ? floor(units) : ceil(units);
@@ -146,8 +146,8 @@ static void lay_out_table(lm_slicer *s)
     }
 }
 
-lm_status lm_slicer_init(lm_slicer *out, lm_reading reading, const double levels[], size_t count,
-                         const uint8_t codes[], uint8_t invalid, lm_fault *fault)
+lm_status lm_slicer_init(lm_slicer *out, lm_reading reading, const double levels[], size_t count, const uint8_t codes[],
+                         uint8_t invalid, lm_fault *fault)
 {
     if (count > LM_MAX_LEVELS)
         return lm_refuse(fault, LM_SIZE, "the number of levels", (double)count, -1, "at most 254");

@@ -22,7 +22,7 @@ static double half_value(uint16_t bits)
 {
     int exponent = (bits >> 10) & 31;
     double fraction = bits & 1023;
-    double size = exponent == 31 ? (fraction > 0 ? NAN : INFINITY)
+    double size = exponent == 31  ? (fraction > 0 ? NAN : INFINITY)
                   : exponent == 0 ? ldexp(fraction, -24)
                                   : ldexp(1024 + fraction, exponent - 25);
     return bits >> 15 ? -size : size;
@@ -123,8 +123,8 @@ static void check_set(const lm_kernels *set, lm_reading reading, size_t count)
         wrong += out[i] != wanted;
     }
     if (wrong > 0)
-        fprintf(stderr, "%s, reading %d, %zu levels, labels %d, n %zu: %zu wrong\n", set->name, (int)reading, count, labels,
-                n, wrong);
+        fprintf(stderr, "%s, reading %d, %zu levels, labels %d, n %zu: %zu wrong\n", set->name, (int)reading, count,
+                labels, n, wrong);
     CHECK(wrong == 0);
 
     /* the same readings swapped, unaligned, three apart and backwards, to codes three apart */
