@@ -56,6 +56,102 @@ typedef struct {
     double high;
 } lm_range;
 
+/* ---- density: the law of the reading in one state --------------------------------------------------------------
+ *
+ *     lm_density *bottle;
+ *     double parameters[] = {1.31, 0.07};
+ *     lm_status status = lm_density_new("gaussian", parameters, 2, &bottle, NULL);
+ *     ...
+ *     lm_density_release(bottle);
+ *
+ * A density is immutable, counted by references, and safe to share between threads. Counts (Poisson and kin) and
+ * points have probability masses where the others have densities.
+ */
+typedef struct lm_density lm_density;
+
+/* A member of a built-in family by name, with its parameters in the order of lm_family_parameter; *out is set only on
+ * success and is the caller's to release. */
+LM_API LM_MUST_USE lm_status lm_density_new(const char *family, const double parameters[], size_t count, lm_density **out,
+                                            lm_fault *fault);
+
+/* A mixture; weights >= 0 that sum to 1 within 1e-9 (they are divided by their sum). The parts are copied. */
+LM_API LM_MUST_USE lm_status lm_density_mixture(const double weights[], const lm_density *const parts[], size_t count,
+                                                lm_density **out, lm_fault *fault);
+
+/* The law of shift + scale * reading; scale != 0, and negative mirrors. */
+LM_API LM_MUST_USE lm_status lm_density_moved(const lm_density *density, double shift, double scale, lm_density **out,
+                                              lm_fault *fault);
+
+/* One more owner, one less; both take NULL and cannot fail. The last release frees. */
+LM_API lm_density *lm_density_retain(const lm_density *density);
+LM_API void lm_density_release(lm_density *density);
+
+/* Over n readings: log density (log mass for counts), log P(X <= x), log P(X > x). NaN gives NaN. Fails only with
+ * LM_CALLBACK (a density that calls out and got NaN or worse); out then holds unspecified numbers. */
+LM_API LM_MUST_USE lm_status lm_density_log_pdf(const lm_density *density, const double x[], double out[], size_t n);
+LM_API LM_MUST_USE lm_status lm_density_log_cdf(const lm_density *density, const double x[], double out[], size_t n);
+LM_API LM_MUST_USE lm_status lm_density_log_sf(const lm_density *density, const double x[], double out[], size_t n);
+
+/* log P(low <= X < high), each interval from whichever tail is smaller; -inf when low >= high. */
+LM_API LM_MUST_USE lm_status lm_density_log_mass(const lm_density *density, double low, double high, double *out);
+
+/* The smallest reading whose log_cdf is >= log_p (upper: whose log_sf is <= log_p), from log probabilities <= 0, so
+ * that both tails are reached as far as logarithms of probabilities go. */
+LM_API LM_MUST_USE lm_status lm_density_quantile(const lm_density *density, double log_p, bool upper, double *out);
+
+/* Mean and variance; NaN where they do not exist, inf where they diverge. */
+LM_API LM_MUST_USE lm_status lm_density_moments(const lm_density *density, double *mean, double *variance);
+
+/* The smallest closed interval with all the probability; whether readings are counts (or points) only. */
+LM_API lm_range lm_density_support(const lm_density *density);
+LM_API bool lm_density_discrete(const lm_density *density);
+
+/* The table of families: names, and the name of each parameter (NULL past the last). */
+LM_API size_t lm_family_count(void);
+LM_API const char *lm_family_name(size_t family);
+LM_API const char *lm_family_parameter(size_t family, size_t parameter);
+
+/* ---- decide: where one decision gives way to another -------------------------------------------------------------
+ *
+ * How a search for levels went. It is exhaustive where neither `unresolved` nor `sampled` counts anything: every level
+ * over all finite doubles is there, proven by bounds. `touches` counts places where two decisions come equally good
+ * without changing over.
+ */
+typedef struct {
+    size_t pieces;     /* intervals on which bounds were judged */
+    size_t touches;
+    size_t unresolved; /* pieces at the resolution of doubles on which bounds left the sign open */
+    size_t sampled;    /* pairs of decisions searched by sampling, because a density knows no bounds */
+    double resolution; /* the widest gap between samples, in units of the smallest scale; 0 where none was sampled */
+} lm_search;
+
+/* Levels in ascending order, and the decision of each of the count + 1 intervals between them. */
+typedef struct {
+    size_t count;
+    double *levels;
+    size_t *decisions;
+    lm_search search;
+} lm_rule;
+
+/* The rule of least prior-weighted cost. costs holds decisions rows of states numbers, row by row; NULL with decisions
+ * = states is one for each wrong decision. Ties go to the lower index; where no state has density the decision of the
+ * nearest support edge holds. *out is the caller's to free on success and holds nothing on failure. */
+LM_API LM_MUST_USE lm_status lm_bayes(const lm_density *const densities[], const double priors[], size_t states,
+                                      const double *costs, size_t decisions, lm_rule *out, lm_fault *fault);
+
+/* NULL members are allowed. */
+LM_API void lm_rule_free(lm_rule *rule);
+
+/* log P(decision | state), decisions rows of states numbers. decisions_of holds count + 1 entries below decisions. */
+LM_API LM_MUST_USE lm_status lm_transition(const double levels[], const size_t decisions_of[], size_t count,
+                                           const lm_density *const densities[], size_t states, size_t decisions,
+                                           double log_transition[]);
+
+/* Prior-weighted cost of a transition matrix, as the logarithms of its positive and its negative part (costs may have
+ * either sign). costs NULL: 1 for each wrong decision among the first `states`, 0 for decisions beyond them. */
+LM_API void lm_log_risk(const double log_transition[], const double priors[], size_t states, const double *costs,
+                        size_t decisions, double *log_positive, double *log_negative);
+
 /* ---- slice: levels applied to arrays ---------------------------------------------------------------------------
  * The types a reading can have: name, C type. One list for kernels, loops and tests. LM_F16 is IEEE binary16, carried
  * as its bits.

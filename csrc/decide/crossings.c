@@ -1,0 +1,199 @@
+/* The exhaustive search for changes of sign: subdivision in u until bounds settle every piece, then refinement. */
+#include "crossings.h"
+
+#include <float.h>
+#include <math.h>
+#include <stdlib.h>
+
+#include "../numeric/memory.h"
+
+lm_status lm_points_add(lm_points *points, double x)
+{
+    if (points->count == points->capacity) {
+        size_t capacity = points->capacity > 0 ? 2 * points->capacity : 16;
+        double *at = lm_reallocate(points->at, capacity, sizeof *at);
+        if (at == NULL)
+            return LM_NO_MEMORY;
+        points->at = at;
+        points->capacity = capacity;
+    }
+    points->at[points->count++] = x;
+    return LM_OK;
+}
+
+static int ascending(const void *a, const void *b)
+{
+    double x = *(const double *)a, y = *(const double *)b;
+    return (x > y) - (x < y);
+}
+
+void lm_points_sort(lm_points *points)
+{
+    size_t kept = 0;
+    if (points->count > 1)
+        qsort(points->at, points->count, sizeof *points->at, ascending);
+    for (size_t i = 0; i < points->count; i++)
+        if (kept == 0 || points->at[i] != points->at[kept - 1])
+            points->at[kept++] = points->at[i];
+    points->count = kept;
+}
+
+void lm_points_free(lm_points *points)
+{
+    lm_release(points->at);
+    *points = (lm_points){0};
+}
+
+/* A tie counts as not negative: the lower index. */
+static bool holds(double h)
+{
+    return !(h < 0);
+}
+
+static double ulp(double x)
+{
+    return nextafter(fabs(x), INFINITY) - fabs(x);
+}
+
+/* The change of sign in (low, high], of which there is one: Newton on h, kept inside the bracket, halving in u where a
+ * step leaves it or stalls. Ends when the step is below the spacing of doubles and the sign is seen to change around. */
+static double refine(const lm_gap *gap, double low, double high, bool at_low)
+{
+    double x = lm_gap_middle(gap, low, high), width = INFINITY;
+    while (nextafter(low, high) < high) {
+        double slope, h = lm_gap_value(gap, x, LM_AT, &slope);
+        bool same = holds(h) == at_low;
+        if (same)
+            low = x;
+        else
+            high = x;
+        double next = x - h / slope;
+        if (fabs(next - x) <= 2 * ulp(x) && isfinite(next)) {
+            double margin = 4 * ulp(x), left = fmax(low, next - margin), right = fmin(high, next + margin);
+            bool left_same = left == low || holds(lm_gap_value(gap, left, LM_AT, NULL)) == at_low;
+            bool right_same = right != high && holds(lm_gap_value(gap, right, LM_AT, NULL)) == at_low;
+            if (left_same && !right_same)
+                return fmin(fmax(next, left), right);
+            low = right_same ? right : low;
+            high = left_same ? high : left;
+            x = lm_gap_middle(gap, low, high);
+            continue;
+        }
+        bool halve = !(next > low && next < high) || high - low > 0.5 * width;
+        width = high - low;
+        x = halve ? lm_gap_middle(gap, low, high) : next;
+    }
+    return high;
+}
+
+typedef struct {
+    double low, high;
+} piece;
+
+/* Stack of pieces still to judge, leftmost on top. Deep enough for halving down to neighbours (1100 halvings), each of
+ * which leaves one piece behind. */
+enum { DEPTH = 1200, SAMPLES = 512 };
+
+/* A bound on work, so that laws that are equal but for their rounding cannot hang a search; what is left then is counted
+ * as unresolved. */
+enum { MOST_PIECES = 400000 };
+
+static lm_status settle_monotone(const lm_gap *gap, piece p, lm_points *levels)
+{
+    double first = lm_gap_value(gap, p.low, LM_FROM_RIGHT, NULL), last = lm_gap_value(gap, p.high, LM_FROM_LEFT, NULL);
+    if (holds(first) == holds(last))
+        return LM_OK;
+    return lm_points_add(levels, refine(gap, p.low, p.high, holds(first)));
+}
+
+/* Equal steps in a coordinate that is fine at both ends of the piece and near the centre. */
+static lm_status sample(const lm_gap *gap, piece p, lm_points *levels, lm_search *search)
+{
+    double last = p.low;
+    bool before = holds(lm_gap_value(gap, p.low, LM_FROM_RIGHT, NULL));
+    bool far = isinf(p.high - p.low) || p.high - p.low > 1e3 * gap->scale * SAMPLES;
+    for (int i = 1; i <= SAMPLES; i++) {
+        double part = (double)i / SAMPLES;
+        double x = i == SAMPLES ? p.high
+                   : far        ? lm_gap_between(gap, p.low, p.high, part)
+                                : p.low + (p.high - p.low) * part;
+        if (!(x > last))
+            continue;
+        bool now = holds(lm_gap_value(gap, x, x == p.high ? LM_FROM_LEFT : LM_AT, NULL));
+        if (now != before)
+            LM_TRY(lm_points_add(levels, refine(gap, last, x, before)));
+        if (!far)
+            search->resolution = fmax(search->resolution, (x - last) / gap->scale);
+        before = now;
+        last = x;
+    }
+    return LM_OK;
+}
+
+/* One stretch between neighbouring breaks. */
+static lm_status stretch(lm_gap *gap, double low, double high, lm_points *levels, lm_search *search, bool *sampled)
+{
+    piece stack[DEPTH];
+    size_t depth = 0;
+    stack[depth++] = (piece){low, high};
+    while (depth > 0) {
+        piece p = stack[--depth];
+        search->pieces++;
+        switch (lm_gap_judge(gap, p.low, p.high)) {
+        case LM_GAP_VOID:
+        case LM_GAP_POSITIVE:
+        case LM_GAP_NEGATIVE:
+            break;
+        case LM_GAP_RISING:
+        case LM_GAP_FALLING:
+            LM_TRY(settle_monotone(gap, p, levels));
+            break;
+        case LM_GAP_TIED:
+            search->touches++;
+            LM_TRY(settle_monotone(gap, p, levels));
+            break;
+        case LM_GAP_BOUNDLESS:
+            *sampled = true;
+            LM_TRY(sample(gap, p, levels, search));
+            break;
+        case LM_GAP_OPEN: {
+            double middle = lm_gap_middle(gap, p.low, p.high);
+            bool neighbours = !(middle > p.low && middle < p.high);
+            if (neighbours || depth + 2 > DEPTH || search->pieces > MOST_PIECES) {
+                /* Neighbouring doubles: there is no reading between. */
+                if (neighbours)
+                    search->touches++;
+                else
+                    search->unresolved++;
+                LM_TRY(settle_monotone(gap, p, levels));
+            } else {
+                stack[depth++] = (piece){middle, p.high};
+                stack[depth++] = (piece){p.low, middle};
+            }
+            break;
+        }
+        }
+    }
+    return LM_OK;
+}
+
+lm_status lm_gap_crossings(lm_gap *gap, const lm_points *breaks, lm_points *levels, lm_search *search)
+{
+    bool sampled = false;
+    double low = -DBL_MAX;
+    for (size_t i = 0; i <= breaks->count; i++) {
+        double high = i < breaks->count ? breaks->at[i] : DBL_MAX;
+        if (!(high > low))
+            continue;
+        LM_TRY(stretch(gap, low, high, levels, search, &sampled));
+        /* The sides of a break may differ in sign although each is settled: at a jump, or a root on the break itself. */
+        if (i < breaks->count) {
+            double left = lm_gap_value(gap, high, LM_FROM_LEFT, NULL), right = lm_gap_value(gap, high, LM_FROM_RIGHT, NULL);
+            if (holds(left) != holds(right))
+                LM_TRY(lm_points_add(levels, high));
+        }
+        low = high;
+    }
+    search->sampled += sampled;
+    return LM_OK;
+}
