@@ -12,6 +12,7 @@
 #include <float.h>
 #include <math.h>
 
+#include "../numeric/constants.h"
 #include "../numeric/logspace.h"
 
 /* Rounding of a log density or a score, in units of its value: a few operations each, and libm's own error. */
@@ -31,12 +32,12 @@ static double u_of(const lm_gap *gap, double x)
     if (isinf(away))
         away = copysign(DBL_MAX, away);
     double z = away / gap->scale;
-    return fabs(z) < 1e150 ? asinh(z) : copysign(log(fabs(away)) - log(gap->scale) + M_LN2, z);
+    return fabs(z) < 1e150 ? asinh(z) : copysign(log(fabs(away)) - log(gap->scale) + LM_LN2, z);
 }
 
 static double x_of(const lm_gap *gap, double u)
 {
-    double z = fabs(u) < 350 ? gap->scale * sinh(u) : copysign(exp(fabs(u) - M_LN2 + log(gap->scale)), u);
+    double z = fabs(u) < 350 ? gap->scale * sinh(u) : copysign(exp(fabs(u) - LM_LN2 + log(gap->scale)), u);
     return gap->centre + z;
 }
 

@@ -1,10 +1,9 @@
 /* The Gaussian: standard law exp(-y^2/2) / sqrt(2 pi). */
 #include <math.h>
 
+#include "../numeric/constants.h"
 #include "../numeric/normal.h"
 #include "family.h"
-
-#define LOG_SQRT_2PI 0.918938533204672741780329736406
 
 static lm_status make(const double parameters[], lm_term *term, lm_fault *fault)
 {
@@ -18,7 +17,7 @@ static void log_pdf(const lm_term *term, const double y[], double out[], size_t 
 {
     (void)term;
     for (size_t i = 0; i < n; i++)
-        out[i] = -0.5 * y[i] * y[i] - LOG_SQRT_2PI;
+        out[i] = -0.5 * y[i] * y[i] - LM_LOG_SQRT_2PI;
 }
 
 static double log_cdf(const lm_term *term, double y)

@@ -3,6 +3,7 @@
 #include <math.h>
 #include <string.h>
 
+#include "../numeric/constants.h"
 #include "../numeric/fault.h"
 #include "../numeric/logspace.h"
 #include "family.h"
@@ -116,7 +117,7 @@ lm_status lm_density_quantile(const lm_density *density, double log_p, bool uppe
         }
     }
     target t = {density, log_p, upper};
-    if (log_p > -M_LN2) /* the smaller tail is the better conditioned one */
+    if (log_p > -LM_LN2) /* the smaller tail is the better conditioned one */
         t = (target){density, lm_log1mexp(log_p), !upper};
     double low = nextafter(fmax(bracket.low, -DBL_MAX), -INFINITY), high = fmin(bracket.high, DBL_MAX), at;
     if (closed) { /* the terms' quantiles are rounded: a few units of slack */

@@ -4,11 +4,13 @@
 
 #include <math.h>
 
+#include "constants.h"
+
 /* log(1 - exp(x)) for x <= 0: each form where it does not cancel (M. Maechler, Accurately computing log(1 - exp(-|a|)),
  * 2012). */
 static inline double lm_log1mexp(double x)
 {
-    return x > -M_LN2 ? log(-expm1(x)) : log1p(-exp(x));
+    return x > -LM_LN2 ? log(-expm1(x)) : log1p(-exp(x));
 }
 
 /* log(exp(a) + exp(b)). */

@@ -6,19 +6,18 @@
 #include <gsl/gsl_sf_erf.h>
 #include <math.h>
 
+#include "constants.h"
 #include "logspace.h"
-
-#define LOG_SQRT_2PI 0.918938533204672741780329736406
 
 double lm_normal_log_sf(double z)
 {
     if (z > 1e8) /* the leading term: the next is 1 / z^2 of it */
-        return -0.5 * z * z - log(z) - LOG_SQRT_2PI;
+        return -0.5 * z * z - log(z) - LM_LOG_SQRT_2PI;
     if (z < -38) /* 1 to within 1e-315 */
         return -0.0;
     if (z < -1) /* close to log 1: from the other tail */
-        return log1p(-0.5 * exp(gsl_sf_log_erfc(-z * M_SQRT1_2)));
-    return gsl_sf_log_erfc(z * M_SQRT1_2) - M_LN2;
+        return log1p(-0.5 * exp(gsl_sf_log_erfc(-z * LM_SQRT1_2)));
+    return gsl_sf_log_erfc(z * LM_SQRT1_2) - LM_LN2;
 }
 
 double lm_normal_log_cdf(double z)
@@ -32,7 +31,7 @@ static double narrow(double a, double b)
 {
     double m = 0.5 * (a + b), h = 0.5 * (b - a), m2 = m * m, h2 = h * h;
     double second = (m2 - 1) / 6, fourth = (m2 * m2 - 6 * m2 + 3) / 120;
-    return -0.5 * m2 - LOG_SQRT_2PI + log(b - a) + log1p(h2 * (second + h2 * fourth));
+    return -0.5 * m2 - LM_LOG_SQRT_2PI + log(b - a) + log1p(h2 * (second + h2 * fourth));
 }
 
 double lm_normal_log_mass(double a, double b)
@@ -61,8 +60,8 @@ double lm_normal_quantile_log(double log_p)
     if (log_p > -600)
         return gsl_cdf_ugaussian_Pinv(exp(log_p));
     /* Far out: the leading term, then Newton on the logarithm, whose slope is z (1 + 1 / z^2 + ...). */
-    double z = sqrt(-2 * (log_p + LOG_SQRT_2PI));
-    z = sqrt(-2 * (log_p + LOG_SQRT_2PI + log(z)));
+    double z = sqrt(-2 * (log_p + LM_LOG_SQRT_2PI));
+    z = sqrt(-2 * (log_p + LM_LOG_SQRT_2PI + log(z)));
     for (int i = 0; i < 4; i++)
         z += (lm_normal_log_sf(z) - log_p) / (z + 1 / z);
     return -z;
