@@ -19,7 +19,7 @@ typedef struct lm_shared lm_shared;
 /* Data of a term that does not fit in a few doubles (tables, callbacks, parts of a sum). Owned by count. */
 struct lm_shared {
     atomic_size_t references; /* starts at 1, for the maker */
-    void (*free)(lm_shared *shared);
+    void (*destroy)(lm_shared *shared);
 };
 
 typedef struct {

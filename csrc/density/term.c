@@ -66,7 +66,7 @@ lm_term lm_term_retain(const lm_term *term)
 void lm_term_release(lm_term *term)
 {
     if (term->data != NULL && atomic_fetch_sub_explicit(&term->data->references, 1, memory_order_acq_rel) == 1)
-        term->data->free(term->data);
+        term->data->destroy(term->data);
     term->data = NULL;
 }
 
