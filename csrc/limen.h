@@ -71,8 +71,8 @@ typedef struct lm_density lm_density;
 
 /* A member of a built-in family by name, with its parameters in the order of lm_family_parameter; *out is set only on
  * success and is the caller's to release. */
-LM_API LM_MUST_USE lm_status lm_density_new(const char *family, const double parameters[], size_t count, lm_density **out,
-                                            lm_fault *fault);
+LM_API LM_MUST_USE lm_status lm_density_new(const char *family, const double parameters[], size_t count,
+                                            lm_density **out, lm_fault *fault);
 
 /* A mixture; weights >= 0 that sum to 1 within 1e-9 (they are divided by their sum). The parts are copied. */
 LM_API LM_MUST_USE lm_status lm_density_mixture(const double weights[], const lm_density *const parts[], size_t count,
@@ -118,7 +118,7 @@ LM_API const char *lm_family_parameter(size_t family, size_t parameter);
  * without changing over.
  */
 typedef struct {
-    size_t pieces;     /* intervals on which bounds were judged */
+    size_t pieces; /* intervals on which bounds were judged */
     size_t touches;
     size_t unresolved; /* pieces at the resolution of doubles on which bounds left the sign open */
     size_t sampled;    /* pairs of decisions searched by sampling, because a density knows no bounds */
@@ -157,9 +157,9 @@ LM_API void lm_log_risk(const double log_transition[], const double priors[], si
  * as its bits.
  */
 #define LM_READINGS(X)                                                                                                 \
-    X(I8, i8, int8_t) X(U8, u8, uint8_t) X(I16, i16, int16_t) X(U16, u16, uint16_t) X(I32, i32, int32_t)               \
-    X(U32, u32, uint32_t) X(I64, i64, int64_t) X(U64, u64, uint64_t) X(F16, f16, uint16_t) X(F32, f32, float)          \
-    X(F64, f64, double)
+    X(I8, i8, int8_t)                                                                                                  \
+    X(U8, u8, uint8_t) X(I16, i16, int16_t) X(U16, u16, uint16_t) X(I32, i32, int32_t) X(U32, u32, uint32_t)           \
+        X(I64, i64, int64_t) X(U64, u64, uint64_t) X(F16, f16, uint16_t) X(F32, f32, float) X(F64, f64, double)
 
 #define LM_READING_CODE(code, name, type) LM_##code,
 typedef enum { LM_READINGS(LM_READING_CODE) LM_READING_END } lm_reading;
@@ -172,13 +172,13 @@ typedef enum { LM_READINGS(LM_READING_CODE) LM_READING_END } lm_reading;
 typedef struct {
     const struct lm_kernels *kernels;
     lm_reading reading;
-    uint32_t count;   /* levels that a reading of this type can reach */
-    uint32_t depth;   /* smallest depth >= 1 with 2^depth > count */
-    bool plain;       /* codes[k] == k: no labels to apply */
-    uint8_t invalid;  /* code of NaN */
-    uint8_t code[256];     /* of interval k; entries past count repeat the last */
-    uint8_t found[256];    /* the same, by the bits of the search path, first comparison lowest */
-    uint8_t table[256];    /* 8-bit readings: code of each byte */
+    uint32_t count;                      /* levels that a reading of this type can reach */
+    uint32_t depth;                      /* smallest depth >= 1 with 2^depth > count */
+    bool plain;                          /* codes[k] == k: no labels to apply */
+    uint8_t invalid;                     /* code of NaN */
+    uint8_t code[256];                   /* of interval k; entries past count repeat the last */
+    uint8_t found[256];                  /* the same, by the bits of the search path, first comparison lowest */
+    uint8_t table[256];                  /* 8-bit readings: code of each byte */
     _Alignas(64) uint8_t level[256 * 8]; /* of the reading's type, ascending, padded to 2^depth - 1 with its largest */
     _Alignas(64) uint8_t node[40 * 64];  /* the levels by step of the search, a whole vector or more each */
 } lm_slicer;

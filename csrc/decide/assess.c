@@ -4,8 +4,8 @@
 #include "../limen.h"
 #include "../numeric/logspace.h"
 
-lm_status lm_transition(const double levels[], const size_t decisions_of[], size_t count, const lm_density *const densities[],
-                        size_t states, size_t decisions, double log_transition[])
+lm_status lm_transition(const double levels[], const size_t decisions_of[], size_t count,
+                        const lm_density *const densities[], size_t states, size_t decisions, double log_transition[])
 {
     for (size_t k = 0; k < decisions * states; k++)
         log_transition[k] = -INFINITY;
@@ -22,8 +22,8 @@ lm_status lm_transition(const double levels[], const size_t decisions_of[], size
     return LM_OK;
 }
 
-void lm_log_risk(const double log_transition[], const double priors[], size_t states, const double *costs, size_t decisions,
-                 double *log_positive, double *log_negative)
+void lm_log_risk(const double log_transition[], const double priors[], size_t states, const double *costs,
+                 size_t decisions, double *log_positive, double *log_negative)
 {
     *log_positive = *log_negative = -INFINITY;
     for (size_t d = 0; d < decisions; d++)

@@ -66,7 +66,8 @@ static lm_status check(const problem *p, lm_fault *fault)
     if (!(fabs(sum - 1) <= 1e-9))
         return lm_refuse(fault, LM_DOMAIN, "sum of priors", sum, -1, "1 within 1e-9");
     if (p->states < 1 || p->decisions < 1 || (p->costs == NULL && p->decisions != p->states))
-        return lm_refuse(fault, LM_SIZE, "decisions", (double)p->decisions, -1, "one for each state, or a matrix of costs");
+        return lm_refuse(fault, LM_SIZE, "decisions", (double)p->decisions, -1,
+                         "one for each state, or a matrix of costs");
     for (size_t k = 0; p->costs != NULL && k < p->decisions * p->states; k++)
         if (!isfinite(p->costs[k]))
             return lm_refuse(fault, LM_DOMAIN, "costs", p->costs[k], (ptrdiff_t)k, "finite numbers");

@@ -56,7 +56,8 @@ static double ulp(double x)
 }
 
 /* The change of sign in (low, high], of which there is one: Newton on h, kept inside the bracket, halving in u where a
- * step leaves it or stalls. Ends when the step is below the spacing of doubles and the sign is seen to change around. */
+ * step leaves it or stalls. Ends when the step is below the spacing of doubles and the sign is seen to change around.
+ */
 static double refine(const lm_gap *gap, double low, double high, bool at_low)
 {
     double x = lm_gap_middle(gap, low, high), width = INFINITY;
@@ -94,8 +95,8 @@ typedef struct {
  * which leaves one piece behind. */
 enum { DEPTH = 1200, SAMPLES = 512 };
 
-/* A bound on work, so that laws that are equal but for their rounding cannot hang a search; what is left then is counted
- * as unresolved. */
+/* A bound on work, so that laws that are equal but for their rounding cannot hang a search; what is left then is
+ * counted as unresolved. */
 enum { MOST_PIECES = 400000 };
 
 static lm_status settle_monotone(const lm_gap *gap, piece p, lm_points *levels)
@@ -186,9 +187,11 @@ lm_status lm_gap_crossings(lm_gap *gap, const lm_points *breaks, lm_points *leve
         if (!(high > low))
             continue;
         LM_TRY(stretch(gap, low, high, levels, search, &sampled));
-        /* The sides of a break may differ in sign although each is settled: at a jump, or a root on the break itself. */
+        /* The sides of a break may differ in sign although each is settled: at a jump, or a root on the break itself.
+         */
         if (i < breaks->count) {
-            double left = lm_gap_value(gap, high, LM_FROM_LEFT, NULL), right = lm_gap_value(gap, high, LM_FROM_RIGHT, NULL);
+            double left = lm_gap_value(gap, high, LM_FROM_LEFT, NULL),
+                   right = lm_gap_value(gap, high, LM_FROM_RIGHT, NULL);
             if (holds(left) != holds(right))
                 LM_TRY(lm_points_add(levels, high));
         }

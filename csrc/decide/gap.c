@@ -233,8 +233,9 @@ static double extreme_mean(const lm_gap_bound bound[], size_t n, size_t order[],
             order[at] = i;
             top = fmax(top, bound[i].ratio.high);
         }
-#define STEEP(k) (largest ? (in_u ? bound[order[k]].slope_u.high : bound[order[k]].slope.high)                         \
-                          : -(in_u ? bound[order[k]].slope_u.low : bound[order[k]].slope.low))
+#define STEEP(k)                                                                                                       \
+    (largest ? (in_u ? bound[order[k]].slope_u.high : bound[order[k]].slope.high)                                      \
+             : -(in_u ? bound[order[k]].slope_u.low : bound[order[k]].slope.low))
     double best = STEEP(0);
     if (count > 1 && isfinite(top)) {
         double weights = 0, moment = 0;

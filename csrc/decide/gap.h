@@ -10,7 +10,7 @@
 #include "../density/family.h"
 
 typedef struct {
-    lm_term term; /* borrowed; log |coefficient| is in its log_weight */
+    lm_term term;     /* borrowed; log |coefficient| is in its log_weight */
     double log_scale; /* log of the density's Jacobian; 0 for masses */
     bool positive;
     lm_range support; /* in readings */

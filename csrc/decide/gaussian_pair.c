@@ -2,8 +2,8 @@
  *
  * With t = x - m1, d = m2 - m1 and L = log of (weight1 / sd1) over (weight2 / sd2), the log ratio vanishes where
  *   t^2 (s1 - s2)(s1 + s2) - 2 t d s1^2 + s1^2 (d^2 + 2 L s2^2) = 0,
- * whose discriminant is s1^2 s2^2 (d^2 - 2 L (s1 - s2)(s1 + s2)): with equal weights a sum of two numbers >= 0. The root of
- * larger modulus comes from the sum in the numerator, the other from the product of the roots.
+ * whose discriminant is s1^2 s2^2 (d^2 - 2 L (s1 - s2)(s1 + s2)): with equal weights a sum of two numbers >= 0. The
+ * root of larger modulus comes from the sum in the numerator, the other from the product of the roots.
  */
 #include <float.h>
 #include <math.h>

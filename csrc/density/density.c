@@ -25,7 +25,8 @@ const char *lm_family_name(size_t family)
 
 const char *lm_family_parameter(size_t family, size_t parameter)
 {
-    return family < LM_LENGTH(families) && parameter < LM_PARAMETERS ? families[family]->parameter[parameter].name : NULL;
+    return family < LM_LENGTH(families) && parameter < LM_PARAMETERS ? families[family]->parameter[parameter].name
+                                                                     : NULL;
 }
 
 static lm_density *empty(size_t count)
@@ -242,8 +243,8 @@ lm_status lm_density_log_pdf(const lm_density *density, const double x[], double
 }
 
 /* One tail of each term, added in the log domain. */
-static lm_status tail(const lm_density *density, double (*of_term)(const lm_term *, double), const double x[], double out[],
-                      size_t n)
+static lm_status tail(const lm_density *density, double (*of_term)(const lm_term *, double), const double x[],
+                      double out[], size_t n)
 {
     for (size_t i = 0; i < n; i++) {
         double total = -INFINITY, reading = x[i];

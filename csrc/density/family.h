@@ -44,7 +44,8 @@ struct lm_family {
     const char *name;
     lm_parameter parameter[LM_PARAMETERS + 1]; /* a NULL name ends them; none for a family with data of its own */
 
-    bool lattice;  /* masses on integer y, not a density; log_pdf is then a smooth continuation to the real y of its support */
+    bool lattice;  /* masses on integer y, not a density; log_pdf is then a smooth continuation to the real y of its
+                      support */
     bool fallible; /* calls out: NaN from any function below means failure */
 
     /* Fills shift, scale, shape and constant from checked parameters (each in its domain); the term comes zeroed but
@@ -75,15 +76,16 @@ struct lm_family {
      * most capacity of them and returns how many there are. Every kink and jump must be among them. NULL: none. */
     size_t (*landmarks)(const lm_term *term, double out[], size_t capacity);
 
-    /* Range of the score d log_pdf / dy over low <= y <= high (inside the support, no kink strictly inside), as tight as
-     * a closed form gives; with low == high the score itself. NULL: the search must sample, and says so. */
+    /* Range of the score d log_pdf / dy over low <= y <= high (inside the support, no kink strictly inside), as tight
+     * as a closed form gives; with low == high the score itself. NULL: the search must sample, and says so. */
     lm_range (*score_range)(const lm_term *term, double low, double high);
 
-    /* Range of y * score(y), likewise: for power tails, where it tends to a constant. NULL: nothing tighter is known. */
+    /* Range of y * score(y), likewise: for power tails, where it tends to a constant. NULL: nothing tighter is known.
+     */
     lm_range (*tail_range)(const lm_term *term, double low, double high);
 
-    /* For two terms of this family: ranges over the readings low <= x <= high (x, not y) of log f_a(x) - log f_b(x), log
-     * weights and scales included, and of its derivative in x, without cancellation; with low == high the values.
+    /* For two terms of this family: ranges over the readings low <= x <= high (x, not y) of log f_a(x) - log f_b(x),
+     * log weights and scales included, and of its derivative in x, without cancellation; with low == high the values.
      * Half-infinite slopes are allowed where only the sign is known. False where this pair has no closed form
      * (different shapes, say). NULL: never. */
     bool (*ratio)(const lm_term *a, const lm_term *b, double low, double high, lm_range *ratio, lm_range *slope);

@@ -167,7 +167,8 @@ static double mass_between(const lm_term *term, double low, double high)
         return family->log_cdf(term, high);
     if (beyond == -INFINITY)
         return family->log_sf(term, low);
-    return below < beyond ? lm_log_sub(family->log_cdf(term, high), below) : lm_log_sub(family->log_sf(term, low), beyond);
+    return below < beyond ? lm_log_sub(family->log_cdf(term, high), below)
+                          : lm_log_sub(family->log_sf(term, low), beyond);
 }
 
 double lm_term_log_mass(const lm_term *term, double low, double high)

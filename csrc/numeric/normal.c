@@ -25,8 +25,8 @@ double lm_normal_log_cdf(double z)
     return lm_normal_log_sf(-z);
 }
 
-/* P = integral of the density over the interval = density at the middle times width times (1 + h^2 (m^2 - 1) / 6 + ...),
- * h the half width: for narrow intervals, where the difference of tails would cancel. */
+/* P = integral of the density over the interval = density at the middle times width times (1 + h^2 (m^2 - 1) / 6 +
+ * ...), h the half width: for narrow intervals, where the difference of tails would cancel. */
 static double narrow(double a, double b)
 {
     double m = 0.5 * (a + b), h = 0.5 * (b - a), m2 = m * m, h2 = h * h;

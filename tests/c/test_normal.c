@@ -9,7 +9,8 @@ int main(void)
     CHECK_CLOSE(lm_normal_log_sf(-2.385), -0.0085762316435017552, 4e-16);
     CHECK_CLOSE(lm_normal_log_sf(40), -804.60844201375379, 4e-16);
     CHECK_CLOSE(lm_normal_log_cdf(-1e4), -50000010.129278915, 4e-16);
-    CHECK_CLOSE(lm_normal_log_mass(3, 3 + 1e-9), -26.142204288910716, 2e-9); /* the width itself rounds: 1e-9 +- 2e-16 */
+    CHECK_CLOSE(lm_normal_log_mass(3, 3 + 1e-9), -26.142204288910716,
+                2e-9); /* the width itself rounds: 1e-9 +- 2e-16 */
     CHECK_CLOSE(lm_normal_quantile_log(lm_normal_log_cdf(-1e4)), -1e4, 1e-15);
     CHECK_CLOSE(lm_normal_quantile_log(lm_normal_log_cdf(-30.25)), -30.25, 1e-14);
     CHECK_CLOSE(lm_normal_quantile_log(lm_normal_log_cdf(5.5)), 5.5, 1e-9);
