@@ -194,6 +194,38 @@ LM_API LM_MUST_USE lm_status lm_slicer_init(lm_slicer *out, lm_reading reading, 
 LM_API void lm_slicer_decide(const lm_slicer *slicer, const void *x, ptrdiff_t stride, bool swapped, size_t n,
                              uint8_t *out, ptrdiff_t out_stride);
 
+/* One bit a reading: bit 0 of its code, the first reading in the lowest bit of a byte, or in the highest when big; the
+ * last byte is filled up with zeros. out has (n + 7) / 8 bytes. Returns how many codes have bit 7 set: a slicer whose
+ * invalid code is 0x80 or 0x81 counts NaN so. Cannot fail. */
+LM_API size_t lm_slicer_pack(const lm_slicer *slicer, const void *x, ptrdiff_t stride, bool swapped, size_t n, bool big,
+                             uint8_t *out);
+
+/* Adds to counts[code * states + state] for n < 2^32 readings and their true states (of an integer type, in native
+ * byte order; NULL: all in state 0). The slicer's codes are below decisions and its invalid code is decisions, the last
+ * row of counts: (decisions + 1) * states. store, unless NULL, takes the codes, 255 for NaN. LM_DOMAIN when a truth is
+ * not below states (at most 255), LM_NO_MEMORY; counts is untouched then. */
+LM_API LM_MUST_USE lm_status lm_slicer_tally(const lm_slicer *slicer, const void *x, ptrdiff_t stride, bool swapped,
+                                             size_t n, const void *truth, ptrdiff_t truth_stride,
+                                             lm_reading truth_reading, uint32_t decisions, uint32_t states,
+                                             uint8_t *store, ptrdiff_t store_stride, uint64_t counts[],
+                                             lm_fault *fault);
+
+/* Levels with bands of these widths around them: an interval is left upwards when x >= level + width / 2 and downwards
+ * when x < level - width / 2. *interval carries the state from call to call; LM_NO_INTERVAL: the first reading that is
+ * a number starts, by the bare levels. NaN gets the invalid code and changes nothing. */
+#define LM_NO_INTERVAL 255
+typedef struct {
+    lm_slicer bare, up, down;
+    uint8_t code[LM_MAX_LEVELS + 1];
+    uint8_t invalid;
+} lm_hysteresis;
+
+LM_API LM_MUST_USE lm_status lm_hysteresis_init(lm_hysteresis *out, lm_reading reading, const double levels[],
+                                                const double widths[], size_t count, const uint8_t codes[],
+                                                uint8_t invalid, lm_fault *fault);
+LM_API void lm_hysteresis_decide(const lm_hysteresis *hysteresis, const void *x, ptrdiff_t stride, bool swapped,
+                                 size_t n, uint8_t *interval, uint8_t *out, ptrdiff_t out_stride);
+
 /* Bytes of one reading; cannot fail. */
 LM_API size_t lm_reading_size(lm_reading reading);
 

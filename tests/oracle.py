@@ -27,3 +27,20 @@ def tally(codes, truth, decisions, states, invalid=255):
     keep = codes != invalid
     np.add.at(counts, (codes[keep], truth[keep]), 1)
     return counts, int((~keep).sum())
+
+
+def hysteresis(x, levels, codes, width, start=None, invalid=255):
+    """One reading after the other: the interval moves up past upper edges and down below lower ones."""
+    interval, out = start, []
+    for v in x:
+        if v != v:
+            out.append(invalid)
+            continue
+        if interval is None:
+            interval = sum(v >= level for level in levels)
+        while interval < len(levels) and v >= levels[interval] + width / 2:
+            interval += 1
+        while interval > 0 and v < levels[interval - 1] - width / 2:
+            interval -= 1
+        out.append(codes[interval])
+    return np.array(out, np.uint8), interval

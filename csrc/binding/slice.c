@@ -1,9 +1,8 @@
 /* Levels applied to NumPy arrays: the generalized ufunc `decide`, and `slice`, which knows threads and any layout. */
-#include "binding.h"
+#include "slice.h"
 
 #include <fenv.h>
 #include <string.h>
-#include <time.h>
 
 /* ---- the gufunc (),(m),(n)->() ---- */
 
@@ -24,8 +23,7 @@
     X(NPY_FLOAT, LM_F32)                                                                                               \
     X(NPY_DOUBLE, LM_F64)
 
-/* The reading type of a NumPy type number; LM_READING_END when there is no kernel for it. */
-static lm_reading reading_of(int number)
+lm_reading lm_reading_of(int number)
 {
     switch (number) {
 #define CASE(type, reading)                                                                                            \
@@ -112,145 +110,49 @@ static int add_decide(PyObject *module)
 
 /* ---- arrays of any layout, with threads ---- */
 
-/* Between blocks the calling thread takes the GIL back, at most twenty times a second, to see whether Ctrl-C was hit.
- */
-typedef struct {
-    PyThreadState *saved;
-    struct timespec asked;
-} interrupt;
-
-static bool interrupted(interrupt *state)
+lm_reading lm_reading_of_array(PyArrayObject *x)
 {
-    struct timespec now;
-    clock_gettime(CLOCK_MONOTONIC, &now);
-    double since = (double)(now.tv_sec - state->asked.tv_sec) + 1e-9 * (double)(now.tv_nsec - state->asked.tv_nsec);
-    if (since < 0.05)
-        return false;
-    state->asked = now;
-    PyEval_RestoreThread(state->saved);
-    bool stop = PyErr_CheckSignals() < 0;
-    state->saved = PyEval_SaveThread();
-    return stop;
-}
-
-enum { BLOCK = 1 << 19 }; /* readings: a fraction of a millisecond of work, far above the cost of handing it out */
-
-/* Readings and codes as one run of strides each. */
-typedef struct {
-    interrupt interrupt; /* first, so that the stop callback finds it */
-    const lm_slicer *slicer;
-    const char *x;
-    char *out;
-    npy_intp x_stride, out_stride, n;
-    bool swapped;
-} decide_run;
-
-static void decide_block(void *context, size_t block)
-{
-    const decide_run *run = context;
-    npy_intp from = (npy_intp)block * BLOCK;
-    npy_intp n = run->n - from < BLOCK ? run->n - from : BLOCK;
-    lm_slicer_decide(run->slicer, run->x + from * run->x_stride, run->x_stride, run->swapped, (size_t)n,
-                     (uint8_t *)run->out + from * run->out_stride, run->out_stride);
-}
-
-static bool decide_stop(void *context)
-{
-    return interrupted(context);
-}
-
-/* The stride of an array read as one run in memory order; false when it is no such run. */
-static bool as_run(PyArrayObject *array, bool fortran, npy_intp *stride)
-{
-    *stride = PyArray_ITEMSIZE(array);
-    if (fortran ? PyArray_IS_F_CONTIGUOUS(array) : PyArray_IS_C_CONTIGUOUS(array))
-        return true;
-    if (PyArray_NDIM(array) != 1)
-        return false;
-    *stride = PyArray_STRIDE(array, 0);
-    return true;
-}
-
-static int decide_runs(PyArrayObject *x, PyArrayObject *out, decide_run *run, unsigned threads)
-{
-    lm_status status;
-    for (int fortran = 0; fortran < 2; fortran++)
-        if (as_run(x, fortran, &run->x_stride) && as_run(out, fortran, &run->out_stride)) {
-            run->x = PyArray_BYTES(x);
-            run->out = PyArray_BYTES(out);
-            run->n = PyArray_SIZE(x);
-            run->interrupt.saved = PyEval_SaveThread();
-            status = lm_run_blocks((size_t)((run->n + BLOCK - 1) / BLOCK), threads, decide_block, decide_stop, run);
-            PyEval_RestoreThread(run->interrupt.saved);
-            return status == LM_OK ? 0 : -1; /* it fails only when the signal handler has raised */
-        }
-
-    PyArrayObject *operands[2] = {x, out};
-    npy_uint32 flags[2] = {NPY_ITER_READONLY, NPY_ITER_WRITEONLY};
-    NpyIter *iter = NpyIter_MultiNew(2, operands, NPY_ITER_EXTERNAL_LOOP | NPY_ITER_ZEROSIZE_OK, NPY_KEEPORDER,
-                                     NPY_NO_CASTING, flags, NULL);
-    if (iter == NULL)
-        return -1;
-    NpyIter_IterNextFunc *next = NpyIter_GetIterNext(iter, NULL);
-    if (next == NULL) {
-        NpyIter_Deallocate(iter);
-        return -1;
-    }
-    char **at = NpyIter_GetDataPtrArray(iter);
-    npy_intp *strides = NpyIter_GetInnerStrideArray(iter), *inner = NpyIter_GetInnerLoopSizePtr(iter);
-    bool stop = false;
-    run->interrupt.saved = PyEval_SaveThread();
-    do {
-        run->x = at[0];
-        run->out = at[1];
-        run->x_stride = strides[0];
-        run->out_stride = strides[1];
-        run->n = *inner;
-        for (npy_intp block = 0; block * BLOCK < run->n && !stop; block++) {
-            decide_block(run, (size_t)block);
-            stop = interrupted(&run->interrupt);
-        }
-    } while (!stop && next(iter));
-    PyEval_RestoreThread(run->interrupt.saved);
-    return NpyIter_Deallocate(iter) == NPY_SUCCEED && !stop ? 0 : -1;
-}
-
-/* Levels and codes from Python objects into a slicer for the readings of x; -1 with an error set. */
-static int slicer_from(PyArrayObject *x, PyObject *levels_object, PyObject *codes_object, int invalid,
-                       lm_slicer *slicer)
-{
-    lm_reading reading = reading_of(PyArray_TYPE(x));
-    if (reading == LM_READING_END) {
+    lm_reading reading = lm_reading_of(PyArray_TYPE(x));
+    if (reading == LM_READING_END)
         PyErr_Format(PyExc_TypeError, "x holds %S; expected real numbers of at most 64 bits",
                      (PyObject *)PyArray_DESCR(x));
-        return -1;
-    }
-    int result = -1;
-    PyArrayObject *levels = (PyArrayObject *)PyArray_FROMANY(levels_object, NPY_DOUBLE, 1, 1, NPY_ARRAY_CARRAY_RO);
-    PyArrayObject *codes = (PyArrayObject *)PyArray_FROMANY(codes_object, NPY_UINT8, 1, 1, NPY_ARRAY_CARRAY_RO);
-    if (levels != NULL && codes != NULL) {
-        lm_fault fault = {.argument = NULL};
-        lm_status status;
-        if (PyArray_SIZE(codes) != PyArray_SIZE(levels) + 1) {
-            fault = (lm_fault){"the number of decisions", "one more than the number of levels",
-                               (double)PyArray_SIZE(codes), -1};
-            status = LM_SIZE;
-        } else {
-            status = lm_slicer_init(slicer, reading, PyArray_DATA(levels), (size_t)PyArray_SIZE(levels),
-                                    PyArray_DATA(codes), (uint8_t)invalid, &fault);
-        }
-        if (status == LM_OK)
-            result = 0;
-        else
-            lm_raise(status, &fault);
-    }
-    Py_XDECREF(levels);
-    Py_XDECREF(codes);
-    return result;
+    return reading;
 }
 
-/* A new reference to `given`, checked, or to a new array like x when it is None. */
-static PyArrayObject *out_like(PyArrayObject *x, PyObject *given)
+int lm_levels_and_codes(PyObject *levels, PyObject *codes, PyArrayObject **levels_out, PyArrayObject **codes_out)
+{
+    *codes_out = NULL;
+    *levels_out = (PyArrayObject *)PyArray_FROMANY(levels, NPY_DOUBLE, 1, 1, NPY_ARRAY_CARRAY_RO);
+    if (*levels_out != NULL)
+        *codes_out = (PyArrayObject *)PyArray_FROMANY(codes, NPY_UINT8, 1, 1, NPY_ARRAY_CARRAY_RO);
+    if (*codes_out != NULL && PyArray_SIZE(*codes_out) != PyArray_SIZE(*levels_out) + 1) {
+        lm_fault fault = {"the number of decisions", "one more than the number of levels",
+                          (double)PyArray_SIZE(*codes_out), -1};
+        lm_raise(LM_SIZE, &fault);
+        Py_CLEAR(*codes_out);
+    }
+    if (*codes_out == NULL)
+        Py_CLEAR(*levels_out);
+    return *codes_out == NULL ? -1 : 0;
+}
+
+int lm_slicer_from(PyArrayObject *x, PyObject *levels_object, PyObject *codes_object, int invalid, lm_slicer *slicer)
+{
+    PyArrayObject *levels, *codes;
+    lm_reading reading = lm_reading_of_array(x);
+    if (reading == LM_READING_END || lm_levels_and_codes(levels_object, codes_object, &levels, &codes) < 0)
+        return -1;
+    lm_fault fault = {.argument = NULL};
+    lm_status status = lm_slicer_init(slicer, reading, PyArray_DATA(levels), (size_t)PyArray_SIZE(levels),
+                                      PyArray_DATA(codes), (uint8_t)invalid, &fault);
+    if (status != LM_OK)
+        lm_raise(status, &fault);
+    Py_DECREF(levels);
+    Py_DECREF(codes);
+    return status == LM_OK ? 0 : -1;
+}
+
+PyArrayObject *lm_out_like(PyArrayObject *x, PyObject *given)
 {
     if (given == Py_None)
         return (PyArrayObject *)PyArray_NewLikeArray(x, NPY_KEEPORDER, PyArray_DescrFromType(NPY_UINT8), 0);
@@ -273,27 +175,35 @@ static PyArrayObject *out_like(PyArrayObject *x, PyObject *given)
     return out;
 }
 
+typedef struct {
+    lm_slicer slicer;
+    bool swapped;
+} decide_context;
+
+static lm_status decide_part(void *context, char *const at[], const npy_intp stride[], npy_intp n)
+{
+    const decide_context *c = context;
+    lm_slicer_decide(&c->slicer, at[0], stride[0], c->swapped, (size_t)n, (uint8_t *)at[1], stride[1]);
+    return LM_OK;
+}
+
 static PyObject *slice(PyObject *module, PyObject *args, PyObject *keywords)
 {
     (void)module;
     static char *names[] = {"x", "levels", "codes", "invalid", "out", "threads", NULL};
+    static const npy_uint32 flags[] = {NPY_ITER_READONLY, NPY_ITER_WRITEONLY};
     PyArrayObject *x;
     PyObject *levels, *codes, *out_object = Py_None;
-    int invalid = 255, threads = 1;
-    if (!PyArg_ParseTupleAndKeywords(args, keywords, "O!OO|iOi", names, &PyArray_Type, &x, &levels, &codes, &invalid,
+    int invalid = 255;
+    unsigned threads = 1;
+    if (!PyArg_ParseTupleAndKeywords(args, keywords, "O!OO|iOI", names, &PyArray_Type, &x, &levels, &codes, &invalid,
                                      &out_object, &threads))
         return NULL;
-    lm_slicer slicer;
-    if (slicer_from(x, levels, codes, invalid, &slicer) < 0)
+    decide_context context = {.swapped = PyArray_ISBYTESWAPPED(x)};
+    if (lm_slicer_from(x, levels, codes, invalid, &context.slicer) < 0)
         return NULL;
-    PyArrayObject *out = out_like(x, out_object);
-    if (out == NULL)
-        return NULL;
-    decide_run run = {.slicer = &slicer, .swapped = PyArray_ISBYTESWAPPED(x)};
-    clock_gettime(CLOCK_MONOTONIC, &run.interrupt.asked);
-    int failed = decide_runs(x, out, &run, threads < 1 ? 1 : (unsigned)threads);
-    feclearexcept(FE_INVALID);
-    if (failed < 0)
+    PyArrayObject *out = lm_out_like(x, out_object);
+    if (out != NULL && lm_walk(2, (PyArrayObject *[]){x, out}, flags, decide_part, &context, threads, NULL) < 0)
         Py_CLEAR(out);
     return (PyObject *)out;
 }

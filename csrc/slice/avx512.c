@@ -8,6 +8,7 @@
 
 #if defined(__x86_64__)
 #include <immintrin.h>
+#include <string.h>
 
 #define TARGET __attribute__((target("avx512f,avx512bw,avx512dq,avx512vl,avx512vbmi")))
 #define INLINE static inline __attribute__((always_inline)) TARGET
@@ -206,7 +207,22 @@ TARGET static void decide_bytes(const lm_slicer *s, const void *readings, size_t
 #define decide_i8 decide_bytes
 #define decide_u8 decide_bytes
 
+TARGET static void pack(const uint8_t code[], size_t bytes, uint8_t out[], bool big)
+{
+    const __m512i backwards =
+        _mm512_broadcast_i32x4(_mm_setr_epi8(7, 6, 5, 4, 3, 2, 1, 0, 15, 14, 13, 12, 11, 10, 9, 8));
+    size_t i = 0;
+    for (; i + 8 <= bytes; i += 8) {
+        __m512i codes = _mm512_loadu_si512(code + 8 * i);
+        if (big)
+            codes = _mm512_shuffle_epi8(codes, backwards);
+        uint64_t bits = _mm512_test_epi8_mask(codes, _mm512_set1_epi8(1));
+        memcpy(out + i, &bits, 8);
+    }
+    lm_pack_plain(code + 8 * i, bytes - i, out + i, big);
+}
+
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
 const lm_kernels lm_kernels_avx512 = {
-    .name = "avx512", .usable = usable, .searches = true, .decide = {LM_READINGS(LM_SLOT)}};
+    .name = "avx512", .usable = usable, .searches = true, .decide = {LM_READINGS(LM_SLOT)}, .pack = pack};
 #endif

@@ -13,5 +13,6 @@ static bool usable(void)
 #define LM_TARGET
 #define LM_SET lm_kernels_baseline
 #define LM_SET_NAME "baseline"
+#define LM_PACK lm_pack_plain
 #include "count_body.h"
 #endif

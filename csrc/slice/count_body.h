@@ -137,4 +137,4 @@ KERNEL(f32, float, int32_t, float, float, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL,
 KERNEL(f64, double, int64_t, double, double, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL, UNEQUAL_ONE)
 
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
-const lm_kernels LM_SET = {.name = LM_SET_NAME, .usable = usable, .decide = {LM_READINGS(LM_SLOT)}};
+const lm_kernels LM_SET = {.name = LM_SET_NAME, .usable = usable, .decide = {LM_READINGS(LM_SLOT)}, .pack = LM_PACK};

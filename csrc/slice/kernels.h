@@ -7,11 +7,17 @@
 /* The codes of n contiguous, aligned readings of the slicer's type. */
 typedef void lm_decide_kernel(const lm_slicer *slicer, const void *x, size_t n, uint8_t out[]);
 
+/* Bit 0 of 8 * bytes codes; big: the first reading in the highest bit. */
+typedef void lm_pack_kernel(const uint8_t code[], size_t bytes, uint8_t out[], bool big);
+
+lm_pack_kernel lm_pack_plain;
+
 typedef struct lm_kernels {
     const char *name;
     bool (*usable)(void);
     bool searches; /* uses lm_slicer.node and lm_slicer.found */
     lm_decide_kernel *decide[LM_READING_END];
+    lm_pack_kernel *pack;
 } lm_kernels;
 
 extern const lm_kernels lm_kernels_portable;

@@ -37,4 +37,5 @@ static bool usable(void)
 }
 
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
-const lm_kernels lm_kernels_portable = {.name = "portable", .usable = usable, .decide = {LM_READINGS(LM_SLOT)}};
+const lm_kernels lm_kernels_portable = {
+    .name = "portable", .usable = usable, .decide = {LM_READINGS(LM_SLOT)}, .pack = lm_pack_plain};

@@ -2,5 +2,6 @@
 
 from ._core import __version__
 from .slicing import build_info, decide
+from .tallies import Tally
 
-__all__ = ["__version__", "build_info", "decide"]
+__all__ = ["Tally", "__version__", "build_info", "decide"]

@@ -157,10 +157,7 @@ def _special(x: Any, out: Any, run: Any, threads: int | None, rule: tuple) -> An
         codes[mask] = rule[2]
         result: Any = np.ma.array(codes, mask=mask, copy=False)
     elif _is(x, "pandas", "Series", "Index"):
-        result = _pandas_values(x, run, threads, rule[2])
-        extra = {"index": x.index} if _is(x, "pandas", "Series") else {}
-        result = type(x)._constructor(result, name=x.name, **extra) if extra else \
-            sys.modules["pandas"].Index(result, name=x.name)
+        result = _like_pandas(x, _pandas_values(x, run, threads, rule[2]))
     elif _is(x, "pandas", "DataFrame"):
         columns = [_pandas_values(x.iloc[:, i], run, threads, rule[2]) for i in range(x.shape[1])]
         result = sys.modules["pandas"].DataFrame(dict(enumerate(columns)), index=x.index)
@@ -213,3 +210,268 @@ def _chunks_like(x: Any, table: np.ndarray) -> tuple:
     leading = table.ndim - 1
     fitting = x.chunks[x.ndim - leading:] if leading <= x.ndim else ((s,) for s in table.shape[:-1])
     return (*(c if s != 1 else (1,) for c, s in zip(fitting, table.shape)), (table.shape[-1],))
+
+
+def pack_any(x: Any, levels: Any, codes: Any, *, bitorder: str = "little", invalid: int | None = None,
+             out: np.ndarray | None = None, threads: int | None = None) -> Any:
+    """One bit a reading, packed along the last axis as ``numpy.packbits(axis=-1)`` packs.
+
+    Parameters
+    ----------
+    x : as for decide_any
+        Scalars become one bit of one byte; pandas, xarray and masked objects give NumPy, dask stays lazy.
+    levels : float64[m]
+    codes : uint8[m + 1]
+        Each 0 or 1.
+    bitorder : "little" or "big"
+        Whether the first reading is the lowest or the highest bit of its byte. Missing bits of the last byte are 0.
+    invalid : 0 or 1, optional
+        The bit of NaN. None: NaN is an error, since a bit cannot mark it.
+    out : uint8[..., ceil(n / 8)], optional
+    threads : int, optional
+
+    Returns
+    -------
+    uint8[..., ceil(n / 8)]
+
+    Raises
+    ------
+    ValueError
+        Codes other than 0 and 1, another bitorder, NaN without `invalid`.
+    """
+    levels, codes = as_levels(levels), as_codes(codes)
+    if (codes > 1).any():
+        raise ValueError(f"decisions holds {codes.max()}; a bit can only tell 0 from 1")
+    if bitorder not in ("little", "big"):
+        raise ValueError(f"bitorder is {bitorder!r}; expected 'little' or 'big'")
+    if invalid not in (None, 0, 1):
+        raise ValueError(f"invalid is {invalid!r}; expected None, 0 or 1")
+    if _is(x, "dask.array", "Array"):
+        if out is not None:
+            raise TypeError("out cannot be given with a dask Array; expected none")
+        if any(c % 8 for c in x.chunks[-1][:-1]):
+            raise ValueError(f"x has chunks {x.chunks[-1]} along its last axis; expected multiples of 8: rechunk it")
+        return x.map_blocks(pack_any, levels, codes, bitorder=bitorder, invalid=invalid, threads=1, dtype=np.uint8,
+                            chunks=(*x.chunks[:-1], tuple(-(-c // 8) for c in x.chunks[-1])))
+    missing = _missing(x)
+    if missing is not None:
+        bits = np.asarray(decide_any(x, levels, codes, threads=threads))
+        return _packed(np.ma.getdata(bits), bits == 255, bitorder, invalid, out)
+    array = np.atleast_1d(as_readings(x))
+    shape = (*array.shape[:-1], -(-array.shape[-1] // 8))
+    if out is None:
+        packed = np.empty(shape, np.uint8)
+    else:
+        packed = _checked_out(out, shape)
+        if np.may_share_memory(array, packed):
+            array = array.copy()
+    lost = _core.pack(array, levels, codes, packed, bitorder == "big", invalid == 1, thread_count(threads, array.size))
+    if lost and invalid is None:
+        raise ValueError(f"x holds {lost} NaN, which a bit cannot mark; pass invalid=0 or invalid=1 to choose their bit")
+    return packed
+
+
+def _packed(bits: np.ndarray, lost: np.ndarray, bitorder: str, invalid: int | None, out: np.ndarray | None) -> np.ndarray:
+    """The same for codes that are there already."""
+    if lost.any() and invalid is None:
+        raise ValueError(f"x holds {lost.sum()} NaN or missing readings, which a bit cannot mark; "
+                         "pass invalid=0 or invalid=1 to choose their bit")
+    packed = np.packbits(np.where(lost, invalid or 0, bits), axis=-1, bitorder=bitorder)
+    if out is None:
+        return packed
+    _checked_out(out, packed.shape)[...] = packed
+    return out
+
+
+def _checked_out(out: Any, shape: tuple[int, ...]) -> np.ndarray:
+    if not isinstance(out, np.ndarray) or out.dtype != np.uint8:
+        raise TypeError(f"out is {getattr(out, 'dtype', type(out).__name__)}; expected a uint8 array")
+    if out.shape != shape:
+        raise ValueError(f"out has shape {out.shape}; expected {shape}")
+    return out
+
+
+def _missing(x: Any) -> np.ndarray | None:
+    """Where a masked array or a nullable pandas column lacks readings; None for all that cannot."""
+    if isinstance(x, np.ma.MaskedArray):
+        return np.ma.getmaskarray(x)
+    if _is(x, "pandas", "Series", "Index") and not isinstance(x.dtype, np.dtype):
+        return np.asarray(x.isna())
+    return None
+
+
+def tally_any(x: Any, levels: Any, codes: Any, truth: Any = None, decisions_count: int | None = None,
+              states_count: int | None = None, store: np.ndarray | None = None,
+              threads: int | None = None) -> tuple[np.ndarray, int]:
+    """Counts of decisions, by true state where it is known, in the pass that decides.
+
+    Parameters
+    ----------
+    x : as for decide_any
+        A dask array is counted block by block where its blocks are, and only the counts travel.
+    levels : float64[m]
+    codes : uint8[m + 1]
+        Decisions, each below `decisions_count`.
+    truth : integers of the shape of x, optional
+        The true state of each reading, below `states_count`.
+    decisions_count, states_count : int, optional
+        Rows and columns of the counts; by default as many as the codes and the truth call for.
+    store : uint8 ndarray of the shape of x, optional
+        Takes the codes as well (255 for NaN). Not with dask.
+    threads : int, optional
+
+    Returns
+    -------
+    counts : int64[decision, state], or int64[decision] without truth
+    invalid : int
+        NaN and missing readings, which are in none of the counts.
+
+    Raises
+    ------
+    ValueError
+        truth that holds other numbers than those of states, or has another shape than x.
+    """
+    levels, codes = as_levels(levels), as_codes(codes)
+    decisions = int(codes.max()) + 1 if decisions_count is None else decisions_count
+    if not 1 <= decisions <= 255:
+        raise ValueError(f"the number of decisions is {decisions}; expected 1 to 255")
+    if _is(x, "dask.array", "Array"):
+        return _dask_tally(x, levels, codes, truth, decisions, states_count, store)
+    if _is(x, "pandas", "Series") and _is(truth, "pandas", "Series") and not x.index.equals(truth.index):
+        raise ValueError("truth has another index than x; expected the same readings in the same order")
+    true = None if truth is None else _as_truth(truth, np.shape(x))
+    states = 1 if true is None else states_count
+    if true is not None and states is None:
+        states = int(true.max()) + 1 if true.size else 1
+    if not 1 <= states <= 255:
+        raise ValueError(f"the number of states is {states}; expected 1 to 255")
+    counts = np.zeros((decisions + 1, states), np.int64)
+    missing = _missing(x)
+    lost = 0
+    if missing is not None:
+        if store is not None:
+            raise TypeError(f"store cannot be given with a {type(x).__name__}; expected none")
+        lost = int(missing.sum())
+        x = np.asarray(x.compressed() if isinstance(x, np.ma.MaskedArray) else x[~missing].to_numpy(
+            dtype=x.dtype.numpy_dtype))
+        true = None if true is None else true[~missing]
+    array = as_readings(x)
+    if store is not None and np.may_share_memory(array, store):
+        array = array.copy()
+    _core.tally(array, levels, codes, counts, true, store, thread_count(threads, array.size))
+    invalid = int(counts[-1].sum()) + lost
+    return (counts[:-1, 0] if truth is None else counts[:-1]), invalid
+
+
+def _as_truth(truth: Any, shape: tuple[int, ...]) -> np.ndarray:
+    array = np.asarray(truth)
+    if array.size == 0:
+        array = array.astype(np.uint8)
+    if array.dtype.kind not in "iub":
+        raise TypeError(f"truth holds {array.dtype}; expected the whole number of each reading's state")
+    if array.shape != shape:
+        raise ValueError(f"truth has shape {array.shape}; expected that of x, {shape}")
+    return array if array.dtype.isnative else array.astype(array.dtype.newbyteorder("="))
+
+
+def _dask_tally(x: Any, levels: np.ndarray, codes: np.ndarray, truth: Any, decisions: int, states_count: int | None,
+                store: Any) -> tuple[np.ndarray, int]:
+    """Counts of each block, summed as a tree; computed at once, since a tally is a result."""
+    if store is not None:
+        raise TypeError("store cannot be given with a dask Array; expected none")
+    arrays = [x]
+    states = 1
+    if truth is not None:
+        da = sys.modules["dask.array"]
+        true = truth.rechunk(x.chunks) if isinstance(truth, da.Array) else da.from_array(
+            _as_truth(truth, x.shape), chunks=x.chunks)
+        if true.shape != x.shape:
+            raise ValueError(f"truth has shape {true.shape}; expected that of x, {x.shape}")
+        if true.dtype.kind not in "iub":
+            raise TypeError(f"truth holds {true.dtype}; expected the whole number of each reading's state")
+        states = int(true.max().compute()) + 1 if states_count is None else states_count
+        arrays.append(true)
+    blocks = sys.modules["dask.array"].map_blocks(
+        _tally_block, *arrays, levels=levels, codes=codes, decisions=decisions, states=states, dtype=np.int64,
+        new_axis=[x.ndim, x.ndim + 1], chunks=(*((1,) * n for n in x.numblocks), (decisions + 1,), (states,)),
+        meta=np.empty((0,) * (x.ndim + 2), np.int64))
+    counts = blocks.sum(axis=tuple(range(x.ndim))).compute()
+    return (counts[:-1, 0] if truth is None else counts[:-1]), int(counts[-1].sum())
+
+
+def _tally_block(x: np.ndarray, truth: np.ndarray | None = None, *, levels: np.ndarray, codes: np.ndarray,
+                 decisions: int, states: int) -> np.ndarray:
+    counts, invalid = tally_any(x, levels, codes, truth, decisions, states, threads=1)
+    whole = np.zeros((decisions + 1, states), np.int64)
+    whole[:-1] = counts.reshape(decisions, -1)
+    whole[-1, 0] = invalid
+    return whole.reshape((1,) * np.ndim(x) + whole.shape)
+
+
+def hysteresis_any(x: Any, levels: Any, codes: Any, width: Any, start: Any = None, *, invalid: int = 255,
+                   out: np.ndarray | None = None) -> tuple[Any, Any]:
+    """Codes with hysteresis, along the last axis, and where each run of readings ended.
+
+    An interval is left upwards when ``x >= level + width / 2`` and downwards when ``x < level - width / 2``.
+
+    Parameters
+    ----------
+    x : as for decide_any, but in order: not dask (stream it), not xarray, not a DataFrame
+    levels : float64[m]
+    codes : uint8[m + 1]
+    width : float or float64[m]
+        Whole width of the band around each level, in the unit of the readings, at least 0.
+    start : int or uint8[...], optional
+        Interval (not decision: one decision can have several) in which each run starts; None or 255: the one in which
+        its first number lies by the bare levels. What a call returned as `end` continues it.
+    invalid : int
+        Code of NaN and missing readings, which change nothing.
+    out : uint8 ndarray, optional
+
+    Returns
+    -------
+    codes : uint8, of the shape and kind of x
+    end : int, or uint8[...] of the shape of x without its last axis
+        Interval in which each run ended; 255 if it held no number yet.
+    """
+    if _is(x, "dask.array", "Array"):
+        raise TypeError("x is a dask Array, whose blocks have no order in time: use limen.stream for hysteresis")
+    if _is(x, "pandas", "DataFrame") or _is(x, "xarray", "DataArray", "Dataset", "Variable"):
+        raise TypeError(f"x is a {type(x).__name__}; expected readings in order: pass its values")
+    levels, codes = as_levels(levels), as_codes(codes, invalid)
+    widths = np.ascontiguousarray(np.broadcast_to(np.asarray(width, np.float64), levels.shape))
+    missing = _missing(x)
+    if missing is not None and (missing.any() or _is(x, "pandas", "Series", "Index")):
+        if missing.ndim != 1 or out is not None:
+            raise TypeError("x has missing readings; expected one run of them, and no out")
+        there = x.compressed() if isinstance(x, np.ma.MaskedArray) else x[~missing].to_numpy(dtype=x.dtype.numpy_dtype)
+        some, end = hysteresis_any(there, levels, codes, width, start, invalid=invalid)
+        result = np.full(missing.shape, invalid, np.uint8)
+        result[~missing] = some
+        if isinstance(x, np.ma.MaskedArray):
+            return np.ma.array(result, mask=missing), end
+        return _like_pandas(x, result), end
+    array = as_readings(x)
+    if out is not None and np.may_share_memory(array, out):
+        array = array.copy()
+    run = array.reshape(1) if array.ndim == 0 else array
+    shape = run.shape[:-1]
+    given = np.asarray(255 if start is None else start)
+    if given.dtype.kind not in "iu" or (given < 0).any() or (given > 255).any():
+        raise ValueError(f"start is {start!r}; expected the number of an interval")
+    ends = np.array(np.broadcast_to(given, shape), np.uint8, order="C")
+    result = _core.hysteresis(run, levels, widths, codes, ends, invalid,
+                              out.reshape(1) if out is not None and array.ndim == 0 else out)
+    end = int(ends) if ends.ndim == 0 else ends
+    if array.ndim == 0:
+        return (result[0] if out is None else out), end
+    if _is(x, "pandas", "Series", "Index"):
+        return _like_pandas(x, result), end
+    return result if out is None else out, end
+
+
+def _like_pandas(x: Any, codes: np.ndarray) -> Any:
+    pandas = sys.modules["pandas"]
+    if isinstance(x, pandas.Index):
+        return pandas.Index(codes, name=x.name)
+    return pandas.Series(codes, index=x.index, name=x.name)

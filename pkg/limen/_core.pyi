@@ -17,3 +17,30 @@ def slice(
 ) -> NDArray[np.uint8]: ...
 def threads_available() -> int: ...
 def kernels() -> tuple[str, list[str]]: ...
+def pack(
+    x: NDArray[np.generic],
+    levels: NDArray[np.float64],
+    codes: NDArray[np.uint8],
+    out: NDArray[np.uint8],
+    big: bool = False,
+    nan_bit: bool = False,
+    threads: int = 1,
+) -> int: ...
+def tally(
+    x: NDArray[np.generic],
+    levels: NDArray[np.float64],
+    codes: NDArray[np.uint8],
+    counts: NDArray[np.int64],
+    truth: NDArray[np.integer] | None = None,
+    store: NDArray[np.uint8] | None = None,
+    threads: int = 1,
+) -> None: ...
+def hysteresis(
+    x: NDArray[np.generic],
+    levels: NDArray[np.float64],
+    widths: NDArray[np.float64],
+    codes: NDArray[np.uint8],
+    intervals: NDArray[np.uint8],
+    invalid: int = 255,
+    out: NDArray[np.uint8] | None = None,
+) -> NDArray[np.uint8]: ...
