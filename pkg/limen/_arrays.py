@@ -267,11 +267,13 @@ def pack_any(x: Any, levels: Any, codes: Any, *, bitorder: str = "little", inval
             array = array.copy()
     lost = _core.pack(array, levels, codes, packed, bitorder == "big", invalid == 1, thread_count(threads, array.size))
     if lost and invalid is None:
-        raise ValueError(f"x holds {lost} NaN, which a bit cannot mark; pass invalid=0 or invalid=1 to choose their bit")
+        raise ValueError(f"x holds {lost} NaN, which a bit cannot mark; "
+                         "pass invalid=0 or invalid=1 to choose their bit")
     return packed
 
 
-def _packed(bits: np.ndarray, lost: np.ndarray, bitorder: str, invalid: int | None, out: np.ndarray | None) -> np.ndarray:
+def _packed(bits: np.ndarray, lost: np.ndarray, bitorder: str, invalid: int | None,
+            out: np.ndarray | None) -> np.ndarray:
     """The same for codes that are there already."""
     if lost.any() and invalid is None:
         raise ValueError(f"x holds {lost.sum()} NaN or missing readings, which a bit cannot mark; "

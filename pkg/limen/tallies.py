@@ -50,8 +50,8 @@ class Tally:
     def __init__(self, counts: Any, invalid: int = 0, names: Sequence[str] = (), states: Sequence[str] | None = None):
         array = np.array(counts)
         if array.ndim not in (1, 2) or 0 in array.shape or array.dtype.kind not in "iu" or (array < 0).any():
-            raise ValueError(f"counts has shape {array.shape} and type {array.dtype}; expected whole numbers of at least "
-                             "0 for each decision, or each decision and state")
+            raise ValueError(f"counts has shape {array.shape} and type {array.dtype}; expected whole numbers of at "
+                             "least 0 for each decision, or each decision and state")
         if invalid < 0 or invalid != int(invalid):
             raise ValueError(f"invalid is {invalid}; expected a whole number of at least 0")
         self.counts = array.astype(np.intp)
@@ -61,7 +61,8 @@ class Tally:
         columns = array.shape[1] if array.ndim == 2 else 0
         self.states = tuple(map(str, states)) if states is not None else self.names[:columns]
         if len(self.names) != array.shape[0]:
-            raise ValueError(f"names has {len(self.names)} entries; expected one for each of {array.shape[0]} decisions")
+            raise ValueError(f"names has {len(self.names)} entries; expected one for each of the "
+                             f"{array.shape[0]} decisions")
         if len(self.states) != columns:
             raise ValueError(f"states has {len(self.states)} entries; expected one for each of {columns} states")
 
@@ -121,7 +122,8 @@ class Tally:
         if not isinstance(other, Tally):
             return NotImplemented
         if self.names != other.names or self.states != other.states:
-            raise ValueError(f"tallies of {other.names} in {other.states} and of {self.names} in {self.states} do not add")
+            raise ValueError(f"tallies of {other.names} in {other.states} and of {self.names} in {self.states} "
+                             "do not add")
         return Tally(self.counts + other.counts, self.invalid + other.invalid, self.names,
                      self.states if self.counts.ndim == 2 else None)
 
@@ -159,6 +161,6 @@ class Tally:
 
     def _repr_html_(self) -> str:
         head, *body = [[html.escape(cell) for cell in row] for row in self._table()]
-        cells = "".join("<tr><th>" + row[0] + "</th>" + "".join(f"<td>{c}</td>" for c in row[1:]) + "</tr>" for row in body)
+        cells = "".join(f"<tr><th>{row[0]}</th>{''.join(f'<td>{c}</td>' for c in row[1:])}</tr>" for row in body)
         return (f"<table><tr>{''.join(f'<th>{c}</th>' for c in head)}</tr>{cells}</table>"
                 f"<p>{html.escape(self._summary())}</p>")
