@@ -25,13 +25,6 @@ class Tally:
     states : sequence of str, optional
         Names of the states; by default the first names of the decisions.
 
-    Attributes
-    ----------
-    counts : intp[decision, state] or intp[decision]
-    invalid : int
-    names, states : tuple of str
-        States are empty where the truth is not known.
-
     Examples
     --------
     >>> import limen as lm
@@ -45,7 +38,12 @@ class Tally:
     200 readings, 3 wrong: error rate 0.015; 3 more were NaN
     """
 
-    __slots__ = ("counts", "invalid", "names", "states")
+    __slots__ = {
+        "counts": "intp[decision, state], or intp[decision] where the states are not known; read-only.",
+        "invalid": "Readings that were NaN or missing.",
+        "names": "Names of the decisions.",
+        "states": "Names of the states; empty where they are not known.",
+    }
 
     def __init__(self, counts: Any, invalid: int = 0, names: Sequence[str] = (), states: Sequence[str] | None = None):
         array = np.array(counts)
