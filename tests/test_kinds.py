@@ -203,7 +203,7 @@ def test_xarray_keeps_dimensions_coordinates_and_laziness():
 # ---- many machines ----
 
 def test_two_worker_processes_count_as_one(tmp_path):
-    """A memmapped recording on a cluster of two processes: codes, and counts of which alone travel, equal one call's."""
+    """A memmapped recording on a cluster of two processes: codes and counts equal those of one call."""
     distributed = pytest.importorskip("distributed")
     da = pytest.importorskip("dask.array")
     rng = np.random.default_rng(10)
