@@ -106,6 +106,30 @@ LM_API LM_MUST_USE lm_status lm_density_moments(const lm_density *density, doubl
 LM_API lm_range lm_density_support(const lm_density *density);
 LM_API bool lm_density_discrete(const lm_density *density);
 
+/* The law of from_readings: between the first and the last knot the logarithm of the density is, on each piece, the
+ * cubic with the given values and slopes at its ends; beyond them it falls like the generalized Pareto law with the
+ * given scale and shape >= 0 (0 is exponential), below [0] and above [1]. It need not be normalised. The numbers after
+ * that say what it was fitted to, and change nothing; all may be 0. */
+typedef struct {
+    size_t knots; /* at least 2 */
+    const double *knot; /* ascending */
+    const double *log_density;
+    const double *slope;
+    double tail_scale[2];
+    double tail_shape[2];
+    double readings;            /* how many there were */
+    double tail_readings[2];    /* how many of them below the first and above the last knot */
+    double tail_shape_error[2]; /* standard errors of the shapes */
+    double step;                /* of the lattice of the readings; 0: none */
+} lm_spline_law;
+
+/* The arrays are copied; *out is set only on success and is the caller's to release. */
+LM_API LM_MUST_USE lm_status lm_density_spline(const lm_spline_law *law, lm_density **out, lm_fault *fault);
+
+/* The law that such a density was made from, with arrays that live as long as it does; false for any other density,
+ * also for one that was moved. Cannot fail. */
+LM_API bool lm_density_spline_law(const lm_density *density, lm_spline_law *out);
+
 /* The table of families: names, and the name of each parameter (NULL past the last). */
 LM_API size_t lm_family_count(void);
 LM_API const char *lm_family_name(size_t family);
@@ -245,5 +269,27 @@ LM_API LM_MUST_USE lm_status lm_run_blocks(size_t blocks, unsigned threads, lm_w
 
 /* Processors this process may use: affinity and the quota of its control group; at least 1. Reads /proc. */
 LM_API unsigned lm_threads_available(void);
+
+/* ---- evidence: what recordings say ------------------------------------------------------------------------------
+ *
+ * The density of readings that stand for one state: a log-spline body whose knots are chosen by the Bayes information
+ * criterion, and generalized Pareto tails. Readings on a lattice (clock ticks, converter codes) count as spread evenly
+ * over their cells, half a step to either side. Refuses fewer than 20 readings, fewer than 3 distinct ones, and any
+ * that is not finite or beyond 1e307. *out is set only on success and is the caller's to release.
+ */
+LM_API LM_MUST_USE lm_status lm_density_from_readings(const double readings[], size_t n, lm_density **out,
+                                                      lm_fault *fault);
+
+/* A generalized Pareto tail, shape >= 0. */
+typedef struct {
+    double readings; /* beyond the threshold */
+    double scale, shape;
+    double scale_error, shape_error; /* standard errors */
+    double log_likelihood;
+} lm_pareto_tail;
+
+/* The likeliest tail of the readings above a threshold, of which there must be 2 at least. */
+LM_API LM_MUST_USE lm_status lm_pareto_fit(const double readings[], size_t n, double threshold, lm_pareto_tail *out,
+                                           lm_fault *fault);
 
 #endif
