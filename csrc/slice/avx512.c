@@ -1,5 +1,6 @@
-/* The searching kernels for AVX-512 with byte permutes (Ice Lake, Zen 4 and newer): every step of the search looks its
- * level up in registers by the path so far, so cost grows with the logarithm of the number of levels.
+/* The searching kernels for AVX-512 with byte permutes and population counts (Ice Lake, Zen 4 and newer): every step of
+ * the search looks its level up in registers by the path so far, so cost grows with the logarithm of the number of
+ * levels.
  *
  * 64 readings make 64 codes. The path of a reading is one bit a step, lowest first; a permute ignores index bits above
  * its table, so the path itself is the index of every step. Codes, labels included, are a last permute of the path.
@@ -10,14 +11,14 @@
 #include <immintrin.h>
 #include <string.h>
 
-#define TARGET __attribute__((target("avx512f,avx512bw,avx512dq,avx512vl,avx512vbmi")))
+#define TARGET __attribute__((target("avx512f,avx512bw,avx512dq,avx512vl,avx512vbmi,avx512vpopcntdq,popcnt")))
 #define INLINE static inline __attribute__((always_inline)) TARGET
 
 static bool usable(void)
 {
     return __builtin_cpu_supports("avx512f") && __builtin_cpu_supports("avx512bw") &&
            __builtin_cpu_supports("avx512dq") && __builtin_cpu_supports("avx512vl") &&
-           __builtin_cpu_supports("avx512vbmi");
+           __builtin_cpu_supports("avx512vbmi") && __builtin_cpu_supports("avx512vpopcntdq");
 }
 
 /* ---- codes of 64 paths ---- */
@@ -95,6 +96,14 @@ LOOKUP(16)
 LOOKUP(32)
 LOOKUP(64)
 
+/* Bit 0 of 64 codes. */
+INLINE uint64_t bits_of(__m512i codes, bool big)
+{
+    const __m512i backwards =
+        _mm512_broadcast_i32x4(_mm_setr_epi8(7, 6, 5, 4, 3, 2, 1, 0, 15, 14, 13, 12, 11, 10, 9, 8));
+    return _mm512_test_epi8_mask(big ? _mm512_shuffle_epi8(codes, backwards) : codes, _mm512_set1_epi8(1));
+}
+
 /* ---- kernels ---- */
 
 #define GE_I(bits, x, level) _mm512_cmpge_epi##bits##_mask(x, level)
@@ -133,6 +142,22 @@ LOOKUP(64)
         return may_be_nan ? _mm512_mask_mov_epi8(codes, lost, invalid) : codes;                                        \
     }                                                                                                                  \
                                                                                                                        \
+    /* 64 readings, or the last few of n: a masked load touches no others */                                           \
+    INLINE void load_##name(const uint8_t *x, size_t i, size_t n, __m512i v[bits / 8])                                 \
+    {                                                                                                                  \
+        if (i + 64 <= n) {                                                                                             \
+            for (size_t r = 0; r < bits / 8; r++)                                                                      \
+                v[r] = _mm512_loadu_si512(x + i * (bits / 8) + 64 * r);                                                \
+            return;                                                                                                    \
+        }                                                                                                              \
+        size_t left = (n - i) * (bits / 8);                                                                            \
+        for (size_t r = 0; r < bits / 8; r++) {                                                                        \
+            size_t here = left <= 64 * r ? 0 : left - 64 * r >= 64 ? 64 : left - 64 * r;                               \
+            v[r] = _mm512_maskz_loadu_epi8(here == 64 ? ~0ull : (1ull << here) - 1,                                    \
+                                           here == 0 ? x : x + i * (bits / 8) + 64 * r);                               \
+        }                                                                                                              \
+    }                                                                                                                  \
+                                                                                                                       \
     INLINE void run_##name(const lm_slicer *s, const uint8_t *x, size_t n, uint8_t out[], int depth)                   \
     {                                                                                                                  \
         const map m = map_of(s->found);                                                                                \
@@ -140,19 +165,37 @@ LOOKUP(64)
         __m512i v[bits / 8];                                                                                           \
         size_t i = 0;                                                                                                  \
         for (; i + 64 <= n; i += 64) {                                                                                 \
-            for (int r = 0; r < bits / 8; r++)                                                                         \
-                v[r] = _mm512_loadu_si512(x + i * (bits / 8) + 64 * r);                                                \
+            load_##name(x, i, i + 64, v);                                                                              \
             _mm512_storeu_si512(out + i, codes_##name(s, &m, invalid, v, depth));                                      \
         }                                                                                                              \
         if (i < n) {                                                                                                   \
-            size_t left = (n - i) * (bits / 8); /* bytes; a masked load touches no others */                           \
-            for (size_t r = 0; r < bits / 8; r++) {                                                                    \
-                size_t here = left <= 64 * r ? 0 : left - 64 * r >= 64 ? 64 : left - 64 * r;                           \
-                v[r] = _mm512_maskz_loadu_epi8(here == 64 ? ~0ull : (1ull << here) - 1,                                \
-                                               here == 0 ? x : x + i * (bits / 8) + 64 * r);                           \
-            }                                                                                                          \
+            load_##name(x, i, n, v);                                                                                   \
             _mm512_mask_storeu_epi8(out + i, (1ull << (n - i)) - 1, codes_##name(s, &m, invalid, v, depth));           \
         }                                                                                                              \
+    }                                                                                                                  \
+                                                                                                                       \
+    INLINE size_t run_bits_##name(const lm_slicer *s, const uint8_t *x, size_t n, uint8_t out[], bool big, int depth)  \
+    {                                                                                                                  \
+        const map m = map_of(s->found);                                                                                \
+        const __m512i invalid = _mm512_set1_epi8((char)s->invalid);                                                    \
+        __m512i v[bits / 8];                                                                                           \
+        size_t lost = 0;                                                                                               \
+        for (size_t i = 0; i < n; i += 64) {                                                                           \
+            load_##name(x, i, n, v);                                                                                   \
+            __m512i codes = codes_##name(s, &m, invalid, v, depth);                                                    \
+            if (i + 64 > n)                                                                                            \
+                codes = _mm512_maskz_mov_epi8((1ull << (n - i)) - 1, codes);                                           \
+            if (may_be_nan)                                                                                            \
+                lost += (size_t)_mm_popcnt_u64(_mm512_movepi8_mask(codes));                                            \
+            uint64_t packed = bits_of(codes, big);                                                                     \
+            memcpy(out + i / 8, &packed, i + 64 <= n ? 8 : (n - i + 7) / 8);                                           \
+        }                                                                                                              \
+        return lost;                                                                                                   \
+    }                                                                                                                  \
+                                                                                                                       \
+    TARGET static size_t bits_##name(const lm_slicer *s, const void *x, size_t n, uint8_t out[], bool big)             \
+    {                                                                                                                  \
+        return s->depth == 1 ? run_bits_##name(s, x, n, out, big, 1) : run_bits_##name(s, x, n, out, big, 2);          \
     }                                                                                                                  \
                                                                                                                        \
     TARGET static void decide_##name(const lm_slicer *s, const void *x, size_t n, uint8_t out[])                       \
@@ -206,23 +249,115 @@ TARGET static void decide_bytes(const lm_slicer *s, const void *readings, size_t
 }
 #define decide_i8 decide_bytes
 #define decide_u8 decide_bytes
+#define bits_i8 NULL
+#define bits_u8 NULL
 
 TARGET static void pack(const uint8_t code[], size_t bytes, uint8_t out[], bool big)
 {
-    const __m512i backwards =
-        _mm512_broadcast_i32x4(_mm_setr_epi8(7, 6, 5, 4, 3, 2, 1, 0, 15, 14, 13, 12, 11, 10, 9, 8));
     size_t i = 0;
     for (; i + 8 <= bytes; i += 8) {
-        __m512i codes = _mm512_loadu_si512(code + 8 * i);
-        if (big)
-            codes = _mm512_shuffle_epi8(codes, backwards);
-        uint64_t bits = _mm512_test_epi8_mask(codes, _mm512_set1_epi8(1));
-        memcpy(out + i, &bits, 8);
+        uint64_t packed = bits_of(_mm512_loadu_si512(code + 8 * i), big);
+        memcpy(out + i, &packed, 8);
     }
     lm_pack_plain(code + 8 * i, bytes - i, out + i, big);
 }
 
+/* The bit planes of n bytes, a word for each 64, zeros up to a whole register of words; true when all
+ * bytes are below limit. */
+enum { PLANES = 6, WORDS = LM_COUNTED_READINGS / 64 };
+
+INLINE bool so_many_planes(const uint8_t byte[], size_t n, uint32_t limit, int planes, uint64_t plane[][WORDS])
+{
+    __m512i most = _mm512_setzero_si512();
+    size_t w = 0;
+    for (; 64 * w + 64 <= n; w++) {
+        const __m512i bytes = _mm512_loadu_si512(byte + 64 * w);
+        most = _mm512_max_epu8(most, bytes);
+        _Pragma("GCC unroll 8") for (int p = 0; p < planes; p++) plane[p][w] =
+            _mm512_test_epi8_mask(bytes, _mm512_set1_epi8((char)(1 << p)));
+    }
+    for (; w % 8 != 0 || 64 * w < n; w++) { /* to a whole register of words */
+        const __mmask64 there = n <= 64 * w ? 0 : (1ull << (n - 64 * w)) - 1;
+        const __m512i bytes = _mm512_maskz_loadu_epi8(there, there != 0 ? byte + 64 * w : byte);
+        most = _mm512_max_epu8(most, bytes);
+        for (int p = 0; p < planes; p++)
+            plane[p][w] = _mm512_test_epi8_mask(bytes, _mm512_set1_epi8((char)(1 << p)));
+    }
+    return _mm512_cmpge_epu8_mask(most, _mm512_set1_epi8((char)limit)) == 0;
+}
+
+TARGET static bool planes_of(const uint8_t byte[], size_t n, uint32_t limit, int planes, uint64_t plane[][WORDS])
+{
+    switch (planes) { /* so that each number has its own loop */
+    case 0:
+        return so_many_planes(byte, n, limit, 0, plane);
+    case 1:
+        return so_many_planes(byte, n, limit, 1, plane);
+    case 2:
+        return so_many_planes(byte, n, limit, 2, plane);
+    case 3:
+        return so_many_planes(byte, n, limit, 3, plane);
+    default:
+        return so_many_planes(byte, n, limit, PLANES, plane);
+    }
+}
+
+/* Where the planes spell a value, among the readings that are there; a word for each 64. */
+INLINE void spell(uint32_t value, int planes, uint64_t plane[][WORDS], const uint64_t there[WORDS], size_t words,
+                  uint64_t where[WORDS])
+{
+    for (size_t w = 0; w < words; w += 8) {
+        __m512i here = _mm512_load_si512(there + w);
+        for (int p = 0; p < planes; p++) {
+            const __m512i bits = _mm512_load_si512(plane[p] + w);
+            here = value >> p & 1 ? _mm512_and_si512(bits, here) : _mm512_andnot_si512(bits, here);
+        }
+        _mm512_store_si512(where + w, here);
+    }
+}
+
+/* A cell of the tally is the population of two masks: readings of one decision, readings of one state. All planes are
+ * written before any is read, since a wide load waits for narrow stores just before it. */
+TARGET static bool count(const uint8_t code[], const uint8_t truth[], size_t n, uint32_t decisions, uint32_t states,
+                         uint64_t cell[][8])
+{
+    _Alignas(64) uint64_t code_plane[PLANES][WORDS], truth_plane[PLANES][WORDS];
+    _Alignas(64) uint64_t there[WORDS], decided[WORDS], true_in[LM_COUNTED_CELLS][WORDS];
+    int code_planes = 0, truth_planes = 0;
+    while (decisions > 1u << code_planes)
+        code_planes++;
+    while (states > 1u << truth_planes)
+        truth_planes++;
+    if (!planes_of(code, n, decisions, code_planes, code_plane) ||
+        !planes_of(truth, n, states, truth_planes, truth_plane))
+        return false;
+    const size_t words = (n + 63) / 64;
+    for (size_t w = 0; w < WORDS; w++)
+        there[w] = n >= 64 * w + 64 ? ~0ull : n <= 64 * w ? 0 : (1ull << (n - 64 * w)) - 1;
+    for (uint32_t s = 0; s < states; s++)
+        spell(s, truth_planes, truth_plane, there, words, true_in[s]);
+    for (uint32_t d = 0; d < decisions; d++) {
+        spell(d, code_planes, code_plane, there, words, decided);
+        for (uint32_t s = 0; s < states; s++) {
+            __m512i sum = _mm512_load_si512(cell[d * states + s]);
+            for (size_t w = 0; w < words; w += 8)
+                sum = _mm512_add_epi64(sum, _mm512_popcnt_epi64(_mm512_and_si512(_mm512_load_si512(decided + w),
+                                                                                 _mm512_load_si512(true_in[s] + w))));
+            _mm512_store_si512(cell[d * states + s], sum);
+        }
+    }
+    return true;
+}
+
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
+#define LM_BITS(code, name, type) [LM_##code] = bits_##name,
 const lm_kernels lm_kernels_avx512 = {
-    .name = "avx512", .usable = usable, .searches = true, .decide = {LM_READINGS(LM_SLOT)}, .pack = pack};
+    .name = "avx512",
+    .usable = usable,
+    .searches = true,
+    .decide = {LM_READINGS(LM_SLOT)},
+    .bits = {LM_READINGS(LM_BITS)},
+    .pack = pack,
+    .count = count,
+};
 #endif

@@ -12,12 +12,24 @@ typedef void lm_pack_kernel(const uint8_t code[], size_t bytes, uint8_t out[], b
 
 lm_pack_kernel lm_pack_plain;
 
+/* Readings to bits at once, for a search of at most two steps; counts codes with bit 7 set. */
+typedef size_t lm_bits_kernel(const lm_slicer *slicer, const void *x, size_t n, uint8_t out[], bool big);
+
+/* Adds n pairs (code, state) to the eight parts of cell[code * states + state], aligned to 64 bytes, with at most so
+ * many of each; false, and nothing added, when one is out of range. */
+#define LM_COUNTED_CELLS 40
+#define LM_COUNTED_READINGS 1024
+typedef bool lm_count_kernel(const uint8_t code[], const uint8_t truth[], size_t n, uint32_t decisions, uint32_t states,
+                             uint64_t cell[][8]);
+
 typedef struct lm_kernels {
     const char *name;
     bool (*usable)(void);
     bool searches; /* uses lm_slicer.node and lm_slicer.found */
     lm_decide_kernel *decide[LM_READING_END];
+    lm_bits_kernel *bits[LM_READING_END]; /* NULL: through codes */
     lm_pack_kernel *pack;
+    lm_count_kernel *count; /* NULL: one by one */
 } lm_kernels;
 
 extern const lm_kernels lm_kernels_portable;

@@ -18,6 +18,10 @@ void lm_pack_plain(const uint8_t code[], size_t bytes, uint8_t out[], bool big)
 size_t lm_slicer_pack(const lm_slicer *slicer, const void *x, ptrdiff_t stride, bool swapped, size_t n, bool big,
                       uint8_t *out)
 {
+    size_t size = lm_reading_size(slicer->reading);
+    lm_bits_kernel *at_once = slicer->depth <= 2 ? slicer->kernels->bits[slicer->reading] : NULL;
+    if (at_once != NULL && stride == (ptrdiff_t)size && !swapped && (uintptr_t)x % size == 0)
+        return at_once(slicer, x, n, out, big);
     _Alignas(64) uint8_t code[BLOCK];
     size_t lost = 0;
     for (size_t done = 0; done < n; done += BLOCK) {
@@ -26,7 +30,10 @@ size_t lm_slicer_pack(const lm_slicer *slicer, const void *x, ptrdiff_t stride, 
         for (size_t i = now; i < 8 * bytes; i++)
             code[i] = 0;
         slicer->kernels->pack(code, bytes, out + done / 8, big);
+        uint8_t any = 0;
         for (size_t i = 0; i < now; i++)
+            any |= code[i];
+        for (size_t i = 0; any >= 0x80 && i < now; i++)
             lost += code[i] >> 7;
     }
     return lost;

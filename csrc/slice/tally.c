@@ -8,7 +8,7 @@
 #include "../numeric/memory.h"
 
 enum {
-    BLOCK = 2048,
+    BLOCK = LM_COUNTED_READINGS,
     COPIES =
         4, /* of a small table: neighbouring readings often meet the same cell, and an addition waits for the last */
     SMALL = 1024, /* cells of a table that is copied */
@@ -88,34 +88,45 @@ lm_status lm_slicer_tally(const lm_slicer *slicer, const void *x, ptrdiff_t stri
         return lm_refuse(fault, LM_SIZE, "the number of readings of a part", (double)n, -1, "below 2^32");
     if (truth != NULL && truth_reading > LM_U64)
         return lm_refuse(fault, LM_DOMAIN, "the type of truth", (double)truth_reading, -1, "an integer type");
-    size_t cells = ((size_t)decisions + 1) * states, copy = cells <= SMALL ? cells : 0;
+    size_t cells = ((size_t)decisions + 1) * states;
+    lm_count_kernel *count = cells <= LM_COUNTED_CELLS ? slicer->kernels->count : NULL;
+    size_t copy = cells <= SMALL ? cells : 0;
     uint32_t *cell = lm_allocate_zeroed(copy > 0 ? cells * COPIES : cells, sizeof *cell);
     if (cell == NULL)
         return LM_NO_MEMORY;
     _Alignas(64) uint8_t code[BLOCK], state[BLOCK] = {0};
+    _Alignas(64) uint64_t part[LM_COUNTED_CELLS][8] = {{0}};
     lm_status status = LM_OK;
     for (size_t done = 0; done < n; done += BLOCK) {
         size_t now = n - done < BLOCK ? n - done : BLOCK;
         lm_slicer_decide(slicer, (const char *)x + (ptrdiff_t)done * stride, stride, swapped, now, code, 1);
-        if (truth != NULL) {
-            narrow_of[truth_reading]((const char *)truth + (ptrdiff_t)done * truth_stride, truth_stride, now, states,
-                                     state);
-            if (holds_255(state, now)) {
-                size_t at = 0;
+        const char *true_at = (const char *)truth + (ptrdiff_t)done * truth_stride;
+        bool bytes = truth == NULL || (truth_reading <= LM_U8 && truth_stride == 1);
+        const uint8_t *known = truth != NULL && bytes ? (const uint8_t *)true_at : state;
+        if (truth != NULL && !bytes)
+            narrow_of[truth_reading](true_at, truth_stride, now, states, state);
+        if (count == NULL || !count(code, known, now, decisions + 1, states, part)) {
+            if (truth != NULL)
+                narrow_of[truth_reading](true_at, truth_stride, now, states, state);
+            size_t at = 0;
+            if (truth != NULL && holds_255(state, now)) {
                 while (state[at] != 255)
                     at++;
-                double value = truth_value(truth_reading, (const char *)truth + (ptrdiff_t)(done + at) * truth_stride);
+                double value = truth_value(truth_reading, true_at + (ptrdiff_t)at * truth_stride);
                 status = lm_refuse(fault, LM_DOMAIN, "truth", value, -1, "numbers of states, from 0");
                 break;
             }
+            count_block(code, state, now, states, cell, copy);
         }
-        count_block(code, state, now, states, cell, copy);
         for (size_t i = 0; store != NULL && i < now; i++)
             store[(ptrdiff_t)(done + i) * store_stride] = code[i] == decisions ? 255 : code[i];
     }
-    for (size_t i = 0; i < cells && status == LM_OK; i++)
+    for (size_t i = 0; i < cells && status == LM_OK; i++) {
         for (size_t c = 0; c < (copy > 0 ? COPIES : 1); c++)
             counts[i] += cell[c * copy + i];
+        for (size_t p = 0; count != NULL && p < 8; p++)
+            counts[i] += part[i][p];
+    }
     lm_release(cell);
     return status;
 }
