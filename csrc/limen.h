@@ -250,6 +250,19 @@ LM_API LM_MUST_USE lm_status lm_hysteresis_init(lm_hysteresis *out, lm_reading r
 LM_API void lm_hysteresis_decide(const lm_hysteresis *hysteresis, const void *x, ptrdiff_t stride, bool swapped,
                                  size_t n, uint8_t *interval, uint8_t *out, ptrdiff_t out_stride);
 
+/* Interleaved channels, each with its own levels: levels[channel][count] ascending, codes[count + 1] shared by all or
+ * codes[channel][count + 1]. The caller frees them; NULL is allowed there. On failure *out is NULL. */
+typedef struct lm_channels lm_channels;
+LM_API LM_MUST_USE lm_status lm_channels_new(lm_channels **out, lm_reading reading, const double levels[],
+                                             size_t channels, size_t count, const uint8_t codes[], bool shared,
+                                             uint8_t invalid, lm_fault *fault);
+LM_API void lm_channels_free(lm_channels *channels);
+
+/* Codes of n contiguous, aligned readings, the first of channel 0; x and out do not overlap. Parts of an array are best
+ * cut at multiples of the width, which is a multiple of the number of channels. Neither can fail. */
+LM_API size_t lm_channels_width(const lm_channels *channels);
+LM_API void lm_channels_decide(const lm_channels *channels, const void *x, size_t n, uint8_t *out);
+
 /* Bytes of one reading; cannot fail. */
 LM_API size_t lm_reading_size(lm_reading reading);
 

@@ -131,6 +131,26 @@ def test_each_channel_has_its_own_levels(shape, levels_shape):
                                   np.where(np.broadcast_to(x > 1, wanted_shape), 9, wanted))
 
 
+@pytest.mark.parametrize("channels, count", [(1, 2), (3, 1), (7, 3), (64, 3), (255, 2), (256, 15), (1000, 4)])
+@pytest.mark.parametrize("dtype", awkward.TYPES)
+def test_interleaved_channels_of_every_type(dtype, channels, count):
+    """Each channel alone, by its own levels, some beyond what an integer type can reach; codes shared and not."""
+    rng = np.random.default_rng(channels)
+    x = awkward.values(dtype, 23 * channels + 150)[:23 * channels].reshape(23, channels)
+    levels = np.sort(rng.normal(30, 60, (channels, count)), axis=-1)
+    levels[::5, -1] = 1e30
+    levels[::7, 0] = -1e30
+    for codes in (np.arange(count + 1), rng.integers(0, 255, count + 1), rng.integers(0, 255, (channels, count + 1))):
+        each = np.broadcast_to(codes, (channels, count + 1))
+        wanted = np.stack([lm.decide(x[:, c], levels[c], each[c]) for c in range(channels)], 1)
+        for given in (x, np.asfortranarray(x), x.astype(x.dtype.newbyteorder()),
+                      awkward.unaligned(x.ravel()).reshape(x.shape)):
+            np.testing.assert_array_equal(lm.decide(given, levels, codes), wanted)
+        out = np.zeros((23, channels, 2), np.uint8)[..., 0]
+        assert decide_any(x, levels, codes, out=out, threads=2) is out
+        np.testing.assert_array_equal(out, wanted)
+
+
 def test_threads_change_nothing():
     x = np.random.default_rng(2).normal(size=3_000_001).astype(np.float32)
     wanted = decide_any(x, LEVELS, CODES, threads=1)
@@ -205,6 +225,8 @@ for dtype in "bBhHiIlLefd":
         codes = rng.integers(0, 255, count + 1)
         digest.update(lm.decide(x, levels, codes).tobytes())
         digest.update(lm.decide(x[::-3], levels, np.arange(count + 1)).tobytes())
+        own = np.sort(rng.normal(0, 40, (5, min(count, 20))))
+        digest.update(lm.decide(x[:x.size // 5 * 5].reshape(-1, 5), own, np.arange(own.shape[1] + 1)).tobytes())
 print(lm.build_info()["kernels"], digest.hexdigest())
 """
     digests = set()

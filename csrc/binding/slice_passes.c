@@ -285,6 +285,71 @@ static PyObject *hysteresis(PyObject *module, PyObject *args, PyObject *keywords
     return (PyObject *)out;
 }
 
+/* ---- channels ---- */
+
+typedef struct {
+    lm_channels *channels;
+    npy_intp width;
+    const char *end;  /* of the readings */
+    npy_intp missing; /* readings that the last run lacks */
+} channels_context;
+
+/* An element of the walk is a run of channels. */
+static lm_status channels_part(void *context, char *const at[], const npy_intp stride[], npy_intp runs)
+{
+    const channels_context *c = context;
+    npy_intp n = runs * c->width - (at[0] + runs * stride[0] >= c->end ? c->missing : 0);
+    lm_channels_decide(c->channels, at[0], (size_t)n, (uint8_t *)at[1]);
+    return LM_OK;
+}
+
+static PyObject *channels(PyObject *module, PyObject *args, PyObject *keywords)
+{
+    (void)module;
+    static char *names[] = {"x", "levels", "codes", "out", "invalid", "threads", NULL};
+    PyArrayObject *x, *levels, *codes, *out;
+    int invalid = 255;
+    unsigned threads = 1;
+    if (!PyArg_ParseTupleAndKeywords(args, keywords, "O!O!O!O!|iI", names, &PyArray_Type, &x, &PyArray_Type, &levels,
+                                     &PyArray_Type, &codes, &PyArray_Type, &out, &invalid, &threads))
+        return NULL;
+    lm_reading reading = lm_reading_of_array(x);
+    if (reading == LM_READING_END)
+        return NULL;
+    bool shared = PyArray_NDIM(codes) == 1;
+    npy_intp channels_count = PyArray_NDIM(levels) == 2 ? PyArray_DIM(levels, 0) : 0;
+    npy_intp count = channels_count > 0 ? PyArray_DIM(levels, 1) : 0;
+    if (channels_count == 0 || PyArray_TYPE(levels) != NPY_DOUBLE || !PyArray_ISCARRAY_RO(levels) ||
+        PyArray_TYPE(codes) != NPY_UINT8 || !PyArray_ISCARRAY_RO(codes) ||
+        PyArray_SIZE(codes) != (shared ? 1 : channels_count) * (count + 1) || !PyArray_ISCARRAY_RO(x) ||
+        PyArray_SIZE(x) % channels_count != 0 || PyArray_TYPE(out) != NPY_UINT8 || !PyArray_ISCARRAY(out) ||
+        PyArray_SIZE(out) != PyArray_SIZE(x)) {
+        PyErr_SetString(PyExc_ValueError,
+                        "the arrays do not fit: expected whole rounds of C-contiguous readings, levels[channel, m], "
+                        "decisions[m + 1] or [channel, m + 1], and writable out");
+        return NULL;
+    }
+    channels_context context = {.channels = NULL};
+    lm_fault fault = {.argument = NULL};
+    lm_status status = lm_channels_new(&context.channels, reading, PyArray_DATA(levels), (size_t)channels_count,
+                                       (size_t)count, PyArray_DATA(codes), shared, (uint8_t)invalid, &fault);
+    if (status != LM_OK)
+        return lm_raise(status, &fault);
+    context.width = (npy_intp)lm_channels_width(context.channels);
+    npy_intp n = PyArray_SIZE(x), runs = (n + context.width - 1) / context.width, item = PyArray_ITEMSIZE(x);
+    context.end = PyArray_BYTES(x) + n * item;
+    context.missing = runs * context.width - n;
+    npy_intp block = (1 << 19) / context.width + 1;
+    int failed = lm_walk_run(2, (char *[]){PyArray_BYTES(x), PyArray_BYTES(out)},
+                             (npy_intp[]){context.width * item, context.width}, runs, block, channels_part, &context,
+                             threads, NULL);
+    lm_channels_free(context.channels);
+    if (failed < 0)
+        return NULL;
+    Py_INCREF(out);
+    return (PyObject *)out;
+}
+
 static PyMethodDef functions[] = {
     {"pack", (PyCFunction)(void (*)(void))pack, METH_VARARGS | METH_KEYWORDS,
      "pack($module, /, x, levels, codes, out, big=False, nan_bit=0, threads=1)\n--\n\n"
@@ -295,6 +360,9 @@ static PyMethodDef functions[] = {
     {"hysteresis", (PyCFunction)(void (*)(void))hysteresis, METH_VARARGS | METH_KEYWORDS,
      "hysteresis($module, /, x, levels, widths, codes, intervals, invalid=255, out=None)\n--\n\n"
      "Codes with hysteresis along the last axis; intervals carries the state. See limen.Rule.with_hysteresis."},
+    {"channels", (PyCFunction)(void (*)(void))channels, METH_VARARGS | METH_KEYWORDS,
+     "channels($module, /, x, levels, codes, out, invalid=255, threads=1)\n--\n\n"
+     "Codes of interleaved channels, each with its own levels. See limen.decide."},
     {NULL, NULL, 0, NULL},
 };
 

@@ -111,7 +111,7 @@ INLINE uint64_t bits_of(__m512i codes, bool big)
 #define GE_F(bits, x, level) _mm512_cmp_ps_mask(_mm512_castsi512_ps(x), _mm512_castsi512_ps(level), _CMP_GE_OQ)
 #define GE_D(bits, x, level) _mm512_cmp_pd_mask(_mm512_castsi512_pd(x), _mm512_castsi512_pd(level), _CMP_GE_OQ)
 #define AS_IS(x) (x)
-#define F16_KEY(x) _mm512_xor_si512(x, _mm512_and_si512(_mm512_srai_epi16(x, 15), _mm512_set1_epi16(0x7fff)))
+#define F16_LIFT(x) _mm512_xor_si512(x, _mm512_and_si512(_mm512_srai_epi16(x, 15), _mm512_set1_epi16(0x7fff)))
 #define NAN_NEVER(x) 0
 #define NAN_F16(x)                                                                                                     \
     _mm512_cmpgt_epi16_mask(_mm512_and_si512(x, _mm512_set1_epi16(0x7fff)), _mm512_set1_epi16(LM_F16_INFINITY))
@@ -232,7 +232,7 @@ KERNEL(i32, int32_t, 32, GE_I, AS_IS, NAN_NEVER, false)
 KERNEL(u32, uint32_t, 32, GE_U, AS_IS, NAN_NEVER, false)
 KERNEL(i64, int64_t, 64, GE_I, AS_IS, NAN_NEVER, false)
 KERNEL(u64, uint64_t, 64, GE_U, AS_IS, NAN_NEVER, false)
-KERNEL(f16, uint16_t, 16, GE_I, F16_KEY, NAN_F16, true)
+KERNEL(f16, uint16_t, 16, GE_I, F16_LIFT, NAN_F16, true)
 KERNEL(f32, float, 32, GE_F, AS_IS, NAN_F, true)
 KERNEL(f64, double, 64, GE_D, AS_IS, NAN_D, true)
 
@@ -349,6 +349,12 @@ TARGET static bool count(const uint8_t code[], const uint8_t truth[], size_t n, 
     return true;
 }
 
+/* The compiler's vectors do for channels, whose cost is the tables. */
+#define LM_VECTOR 64
+#define LM_TARGET TARGET
+#include "channel_body.h"
+
+#define LM_CHANNELS(code, name, type) [LM_##code] = channels_##name,
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
 #define LM_BITS(code, name, type) [LM_##code] = bits_##name,
 const lm_kernels lm_kernels_avx512 = {
@@ -357,6 +363,7 @@ const lm_kernels lm_kernels_avx512 = {
     .searches = true,
     .decide = {LM_READINGS(LM_SLOT)},
     .bits = {LM_READINGS(LM_BITS)},
+    .channels = {LM_READINGS(LM_CHANNELS)},
     .pack = pack,
     .count = count,
 };

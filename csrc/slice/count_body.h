@@ -5,19 +5,13 @@
  * step between the two codes it parts, so labels cost one instruction more and no second pass. Many levels are
  * searched, several readings side by side.
  */
-#define INLINE static inline __attribute__((always_inline)) LM_TARGET
-#define LANES(type) (LM_VECTOR / sizeof(type))
+#include "lanes.h"
 
 enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 /* readings searched side by side */ };
 
 /* name; type of reading; lane: signed integer as wide; key: what is compared; kept: type of the slicer's levels; LIFT
  * and LIFT_ONE: reading to key; LEVEL: kept level to key; IS_NAN: vector to mask */
 #define KERNEL(name, type, lane, key, kept, LIFT, LIFT_ONE, LEVEL, IS_NAN, IS_NAN_ONE)                                 \
-    typedef type vec_##name __attribute__((vector_size(LM_VECTOR), aligned(sizeof(type)), may_alias));                 \
-    typedef lane lanes_##name __attribute__((vector_size(LM_VECTOR)));                                                 \
-    typedef key keys_##name __attribute__((vector_size(LM_VECTOR)));                                                   \
-    typedef uint8_t bytes_##name __attribute__((vector_size(LANES(type)), aligned(1), may_alias));                     \
-                                                                                                                       \
     /* LM_VECTOR readings; plain: every step is 1 */                                                                   \
     INLINE void block_##name(const type *x, const key level[], const lane step[], size_t count, lane last,             \
                              lane invalid, bool plain, uint8_t out[])                                                  \
@@ -99,31 +93,6 @@ enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 
             count_##name(s, x, n, out, false);                                                                         \
     }
 
-/* Signed integers and floats compare as they are; unsigned ones with the top bit turned over, since registers compare
- * signed; binary16 by its key. */
-#define AS_KEY(name, v) ((keys_##name)(v))
-#define AS_IS_ONE(name, x) (x)
-#define TOP(name) ((lanes_##name){0} + (lane_##name)((ulane_##name)1 << (8 * sizeof(lane_##name) - 1)))
-#define TURNED(name, v) ((keys_##name)((lanes_##name)(v) ^ TOP(name)))
-#define TURNED_ONE(name, x) ((lane_##name)((x) ^ (ulane_##name)((ulane_##name)1 << (8 * sizeof(lane_##name) - 1))))
-#define F16_KEY(name, v) ((keys_##name)((lanes_##name)(v) ^ (((lanes_##name)(v) >> 15) & 0x7fff)))
-#define NEVER(name, v) ((lanes_##name){0})
-#define NEVER_ONE(x) false
-#define UNEQUAL(name, v) ((v) != (v))
-#define UNEQUAL_ONE(x) ((x) != (x))
-#define F16_NAN(name, v) (((lanes_##name)(v) & 0x7fff) > LM_F16_INFINITY)
-#define F16_NAN_ONE(x) (((x) & 0x7fff) > LM_F16_INFINITY)
-typedef int8_t lane_u8;
-typedef uint8_t ulane_u8;
-typedef int16_t lane_u16;
-typedef uint16_t ulane_u16;
-typedef int32_t lane_u32;
-typedef uint32_t ulane_u32;
-typedef int64_t lane_u64;
-typedef uint64_t ulane_u64;
-
-#define F16_LIFT_ONE(name, x) lm_f16_key(x)
-
 KERNEL(i8, int8_t, int8_t, int8_t, int8_t, AS_KEY, AS_IS_ONE, AS_IS_ONE, NEVER, NEVER_ONE)
 KERNEL(u8, uint8_t, int8_t, int8_t, uint8_t, TURNED, TURNED_ONE, TURNED_ONE, NEVER, NEVER_ONE)
 KERNEL(i16, int16_t, int16_t, int16_t, int16_t, AS_KEY, AS_IS_ONE, AS_IS_ONE, NEVER, NEVER_ONE)
@@ -136,5 +105,12 @@ KERNEL(f16, uint16_t, int16_t, int16_t, int16_t, F16_KEY, F16_LIFT_ONE, AS_IS_ON
 KERNEL(f32, float, int32_t, float, float, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL, UNEQUAL_ONE)
 KERNEL(f64, double, int64_t, double, double, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL, UNEQUAL_ONE)
 
+#include "channel_body.h"
+
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
-const lm_kernels LM_SET = {.name = LM_SET_NAME, .usable = usable, .decide = {LM_READINGS(LM_SLOT)}, .pack = LM_PACK};
+#define LM_CHANNELS(code, name, type) [LM_##code] = channels_##name,
+const lm_kernels LM_SET = {.name = LM_SET_NAME,
+                           .usable = usable,
+                           .decide = {LM_READINGS(LM_SLOT)},
+                           .channels = {LM_READINGS(LM_CHANNELS)},
+                           .pack = LM_PACK};

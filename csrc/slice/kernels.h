@@ -22,12 +22,31 @@ typedef size_t lm_bits_kernel(const lm_slicer *slicer, const void *x, size_t n, 
 typedef bool lm_count_kernel(const uint8_t code[], const uint8_t truth[], size_t n, uint32_t decisions, uint32_t states,
                              uint64_t cell[][8]);
 
+/* Interleaved channels, each with its own levels. Tables are as long as a run of whole rounds of channels, which is
+ * wide enough for any register. */
+enum { LM_LEAST_RUN = 256 };
+
+struct lm_channels {
+    const struct lm_kernels *kernels;
+    lm_reading reading;
+    size_t channels, width, count; /* width: readings of a run; count: levels of each channel */
+    uint8_t invalid;
+    uint8_t code[LM_MAX_LEVELS + 1]; /* where all channels share them */
+    void *level;                     /* of the reading's type (keys for binary16), [count][width] */
+    void *step, *last;               /* signed and as wide: what each level adds when x is below it; the last code. NULL
+                                      * where codes are shared */
+};
+
+/* n readings, the first of channel 0. */
+typedef void lm_channel_kernel(const lm_channels *channels, const void *x, size_t n, uint8_t out[]);
+
 typedef struct lm_kernels {
     const char *name;
     bool (*usable)(void);
     bool searches; /* uses lm_slicer.node and lm_slicer.found */
     lm_decide_kernel *decide[LM_READING_END];
     lm_bits_kernel *bits[LM_READING_END]; /* NULL: through codes */
+    lm_channel_kernel *channels[LM_READING_END];
     lm_pack_kernel *pack;
     lm_count_kernel *count; /* NULL: one by one */
 } lm_kernels;
@@ -36,6 +55,9 @@ extern const lm_kernels lm_kernels_portable;
 extern const lm_kernels lm_kernels_baseline;
 extern const lm_kernels lm_kernels_avx2;
 extern const lm_kernels lm_kernels_avx512;
+
+/* The smallest value of the type that is not below a level (a key for binary16); false, and the largest, if none is. */
+bool lm_ceiling(lm_reading reading, double level, void *out);
 
 /* The chosen set; the best usable one is chosen by the first call. */
 const lm_kernels *lm_kernels_get(void);

@@ -107,6 +107,14 @@ static ceiling *const ceiling_of[] = {LM_READINGS(LM_CEILING)};
 static largest *const largest_of[] = {LM_READINGS(LM_LARGEST)};
 #undef LM_LARGEST
 
+bool lm_ceiling(lm_reading reading, double level, void *out)
+{
+    bool reached = ceiling_of[reading](level, out);
+    if (!reached)
+        largest_of[reading](out);
+    return reached;
+}
+
 /* ---- layouts ---- */
 
 static uint32_t reversed(uint32_t path, uint32_t depth)

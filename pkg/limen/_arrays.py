@@ -5,6 +5,7 @@ Foreign libraries are recognised by name among the modules that are already impo
 
 from __future__ import annotations
 
+import math
 import os
 import sys
 import threading
@@ -136,13 +137,41 @@ def decide_any(x: Any, levels: Any, codes: Any, *, invalid: int = 255, out: np.n
     if out is not None and np.may_share_memory(array, out):
         array = array.copy()
     if levels.ndim > 1 or codes.ndim > 1:
-        result = _core.decide(array, levels, codes) if out is None else _core.decide(array, levels, codes, out=out)
+        return _decide_channels(array, levels, codes, invalid, out, threads)
+    result = _core.slice(array, levels, codes, invalid, out, thread_count(threads, array.size))
+    return result[()] if out is None and array.ndim == 0 else result
+
+
+def _decide_channels(x: np.ndarray, levels: np.ndarray, codes: np.ndarray, invalid: int, out: np.ndarray | None,
+                     threads: int | None) -> np.ndarray:
+    """Each channel with its own levels: a kernel where the channels are the last axes of x, else the ufunc."""
+    lead = np.broadcast_shapes(levels.shape[:-1], codes.shape[:-1])
+    if codes.shape[-1] != levels.shape[-1] + 1:
+        raise ValueError(f"decisions has {codes.shape[-1]} entries; expected one more than {levels.shape[-1]} levels")
+    if x.size == 0 or x.shape[x.ndim - len(lead):] != lead:
+        result = _core.decide(x, levels, codes) if out is None else _core.decide(x, levels, codes, out=out)
         if invalid != 255:
             result = np.asarray(result)
             result[result == 255] = invalid
         return result
-    result = _core.slice(array, levels, codes, invalid, out, thread_count(threads, array.size))
-    return result[()] if out is None and array.ndim == 0 else result
+    result = np.empty(x.shape, np.uint8) if out is None else _checked_out(out, x.shape)
+    channels = math.prod(lead)
+    levels = np.ascontiguousarray(np.broadcast_to(levels, (*lead, levels.shape[-1]))).reshape(channels, -1)
+    if codes.ndim > 1:
+        codes = np.ascontiguousarray(np.broadcast_to(codes, (*lead, codes.shape[-1]))).reshape(channels, -1)
+    # whole where they lie in order, else row by row of the first axis, a few at a time, through contiguous copies
+    rows = x.shape[0] if len(lead) < x.ndim else 1
+    frames, target = (x, result) if len(lead) < x.ndim else (x[None], result[None])
+    direct = x.flags.c_contiguous and x.flags.aligned and x.dtype.isnative and result.flags.c_contiguous
+    step = rows if direct else max(1, rows * FEW // (8 * x.size))
+    for at in range(0, rows, step):
+        part = np.ascontiguousarray(frames[at:at + step], dtype=x.dtype.newbyteorder("="))
+        part = part if part.flags.aligned else part.copy()
+        codes_part = target[at:at + step] if target.flags.c_contiguous else np.empty(part.shape, np.uint8)
+        _core.channels(part, levels, codes, codes_part, invalid, thread_count(threads, x.size))
+        if not target.flags.c_contiguous:
+            target[at:at + step] = codes_part
+    return result
 
 
 def _special(x: Any, out: Any, run: Any, threads: int | None, rule: tuple) -> Any:

@@ -44,3 +44,11 @@ def hysteresis(
     invalid: int = 255,
     out: NDArray[np.uint8] | None = None,
 ) -> NDArray[np.uint8]: ...
+def channels(
+    x: NDArray[np.generic],
+    levels: NDArray[np.float64],
+    codes: NDArray[np.uint8],
+    out: NDArray[np.uint8],
+    invalid: int = 255,
+    threads: int = 1,
+) -> NDArray[np.uint8]: ...
