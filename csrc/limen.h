@@ -263,6 +263,44 @@ LM_API void lm_channels_free(lm_channels *channels);
 LM_API size_t lm_channels_width(const lm_channels *channels);
 LM_API void lm_channels_decide(const lm_channels *channels, const void *x, size_t n, uint8_t *out);
 
+/* A function of the reading (an LLR, a posterior) by a compiled table: segments of the line with a polynomial each, and
+ * the exact function outside them. Who makes the plan answers for its error; the kernels give the same bits on every
+ * instruction set. */
+#define LM_SOFT_DEGREE 7
+#define LM_SOFT_MOST 250 /* segments */
+typedef lm_status lm_soft_exact(const void *context, const double x[], double out[], size_t n);
+typedef struct {
+    size_t count;       /* of segments; may be 0 */
+    const double *edge; /* count + 1, ascending; a segment holds its left edge */
+    const double (*coefficient)[LM_SOFT_DEGREE + 3]; /* powers from 0, then centre and stretch: t = (x - c) * stretch */
+    const float (*single_coefficient)[LM_SOFT_DEGREE + 3];
+    const bool *hole;   /* of each segment: left to the exact function */
+    bool single;        /* single precision keeps the error bound for readings that it holds */
+    size_t direct_count;  /* readings on a lattice instead: the values at origin + k * step, */
+    const double *direct; /* exact elsewhere */
+    double origin, step;
+    lm_soft_exact *exact; /* called from any thread */
+    const void *context;  /* borrowed */
+} lm_soft_plan;
+typedef struct lm_soft lm_soft;
+typedef enum { LM_SOFT_F32, LM_SOFT_F64, LM_SOFT_I8 } lm_soft_output;
+
+/* The plan is copied. NULL may be freed. */
+LM_API LM_MUST_USE lm_status lm_soft_new(const lm_soft_plan *plan, lm_soft **out);
+LM_API void lm_soft_free(lm_soft *soft);
+LM_API size_t lm_soft_segments(const lm_soft *soft);
+LM_API lm_range lm_soft_span(const lm_soft *soft); /* of the table; NaN when it is empty */
+
+/* Values of n readings; out is float, double, or int8 in steps (-127 to 127, -128 for NaN). NaN gives NaN. Fails as
+ * the exact function does. */
+LM_API LM_MUST_USE lm_status lm_soft_values(const lm_soft *soft, lm_reading reading, const void *x, ptrdiff_t stride,
+                                            bool swapped, size_t n, lm_soft_output output, double step, void *out,
+                                            ptrdiff_t out_stride);
+
+/* A segment's polynomial as the kernels evaluate it. */
+LM_API double lm_soft_polynomial(const double coefficient[LM_SOFT_DEGREE + 3], double x);
+LM_API float lm_soft_polynomial_single(const float coefficient[LM_SOFT_DEGREE + 3], float x);
+
 /* Bytes of one reading; cannot fail. */
 LM_API size_t lm_reading_size(lm_reading reading);
 
@@ -282,6 +320,18 @@ LM_API LM_MUST_USE lm_status lm_run_blocks(size_t blocks, unsigned threads, lm_w
 
 /* Processors this process may use: affinity and the quota of its control group; at least 1. Reads /proc. */
 LM_API unsigned lm_threads_available(void);
+
+/* The log likelihood ratio log f_a(x) - log f_b(x), which keeps its accuracy where the two nearly cancel; NaN where
+ * neither state can give the reading. The densities are retained; the caller frees, NULL is allowed there. */
+typedef struct lm_log_ratio lm_log_ratio;
+LM_API LM_MUST_USE lm_status lm_log_ratio_new(const lm_density *a, const lm_density *b, lm_log_ratio **out,
+                                              lm_fault *fault);
+LM_API void lm_log_ratio_free(lm_log_ratio *ratio);
+LM_API LM_MUST_USE lm_status lm_log_ratio_values(const void *ratio, const double x[], double out[], size_t n);
+
+/* A compiled table of it, within 1e-6 of max(1, |LLR|) for readings and results of single precision and better; it
+ * borrows the ratio. */
+LM_API LM_MUST_USE lm_status lm_log_ratio_compile(const lm_log_ratio *ratio, lm_soft **out);
 
 /* ---- evidence: what recordings say ------------------------------------------------------------------------------
  *

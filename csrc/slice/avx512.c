@@ -354,6 +354,60 @@ TARGET static bool count(const uint8_t code[], const uint8_t truth[], size_t n, 
 #define LM_TARGET TARGET
 #include "channel_body.h"
 
+/* ---- soft values: coefficients looked up in registers by the segment ---- */
+
+#define SOFT(name, type, bits, vec, mask, SUB, MUL, ADD, TO, FROM, WIDEN)                                              \
+    INLINE void soft_run_##name(const type coefficient[][LM_SOFT_SEGMENTS], const type x[], const uint8_t segment[],   \
+                                size_t n, type out[], int vectors)                                                     \
+    {                                                                                                                  \
+        for (size_t i = 0; i < n; i += 512 / bits) {                                                                   \
+            const mask there = (mask)(n - i >= 512 / bits ? ~0u : (1u << (n - i)) - 1);                                \
+            const __m512i s = WIDEN(_mm_maskz_loadu_epi8(there, segment + i));                                         \
+            const vec at = _mm512_maskz_loadu_##TO(there, x + i);                                                      \
+            vec row[LM_SOFT_ROWS];                                                                                     \
+            _Pragma("GCC unroll 16") for (int k = 0; k < LM_SOFT_ROWS; k++) row[k] =                                   \
+                FROM(lookup_##bits((const uint8_t *)coefficient[k], vectors, s));                                      \
+            const vec t = MUL(SUB(at, row[LM_SOFT_CENTRE]), row[LM_SOFT_STRETCH]);                                     \
+            vec sum = row[LM_SOFT_DEGREE];                                                                             \
+            _Pragma("GCC unroll 16") for (int k = LM_SOFT_DEGREE - 1; k >= 0; k--) sum = ADD(MUL(sum, t), row[k]);     \
+            _mm512_mask_storeu_##TO(out + i, there, sum);                                                              \
+        }                                                                                                              \
+    }
+SOFT(f32, float, 32, __m512, __mmask16, _mm512_sub_ps, _mm512_mul_ps, _mm512_add_ps, ps, _mm512_castsi512_ps,
+     _mm512_cvtepu8_epi32)
+SOFT(f64, double, 64, __m512d, __mmask8, _mm512_sub_pd, _mm512_mul_pd, _mm512_add_pd, pd, _mm512_castsi512_pd,
+     _mm512_cvtepu8_epi64)
+
+TARGET static void soft_f32(const float coefficient[][LM_SOFT_SEGMENTS], size_t segments, const float x[],
+                            const uint8_t segment[], size_t n, float out[])
+{
+    if (segments <= 16)
+        soft_run_f32(coefficient, x, segment, n, out, 1);
+    else if (segments <= 32)
+        soft_run_f32(coefficient, x, segment, n, out, 2);
+    else if (segments <= 64)
+        soft_run_f32(coefficient, x, segment, n, out, 4);
+    else if (segments <= 128)
+        soft_run_f32(coefficient, x, segment, n, out, 8);
+    else
+        lm_soft_f32_plain(coefficient, segments, x, segment, n, out);
+}
+
+TARGET static void soft_f64(const double coefficient[][LM_SOFT_SEGMENTS], size_t segments, const double x[],
+                            const uint8_t segment[], size_t n, double out[])
+{
+    if (segments <= 8)
+        soft_run_f64(coefficient, x, segment, n, out, 1);
+    else if (segments <= 16)
+        soft_run_f64(coefficient, x, segment, n, out, 2);
+    else if (segments <= 32)
+        soft_run_f64(coefficient, x, segment, n, out, 4);
+    else if (segments <= 64)
+        soft_run_f64(coefficient, x, segment, n, out, 8);
+    else
+        lm_soft_f64_plain(coefficient, segments, x, segment, n, out);
+}
+
 #define LM_CHANNELS(code, name, type) [LM_##code] = channels_##name,
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
 #define LM_BITS(code, name, type) [LM_##code] = bits_##name,
@@ -364,6 +418,8 @@ const lm_kernels lm_kernels_avx512 = {
     .decide = {LM_READINGS(LM_SLOT)},
     .bits = {LM_READINGS(LM_BITS)},
     .channels = {LM_READINGS(LM_CHANNELS)},
+    .soft_f32 = soft_f32,
+    .soft_f64 = soft_f64,
     .pack = pack,
     .count = count,
 };

@@ -106,6 +106,21 @@ KERNEL(f32, float, int32_t, float, float, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL,
 KERNEL(f64, double, int64_t, double, double, AS_KEY, AS_IS_ONE, AS_IS_ONE, UNEQUAL, UNEQUAL_ONE)
 
 #include "channel_body.h"
+#include "soft_body.h"
+
+LM_TARGET static void soft_f32(const float coefficient[][LM_SOFT_SEGMENTS], size_t segments, const float x[],
+                               const uint8_t segment[], size_t n, float out[])
+{
+    (void)segments;
+    evaluate_f32(coefficient, x, segment, n, out);
+}
+
+LM_TARGET static void soft_f64(const double coefficient[][LM_SOFT_SEGMENTS], size_t segments, const double x[],
+                               const uint8_t segment[], size_t n, double out[])
+{
+    (void)segments;
+    evaluate_f64(coefficient, x, segment, n, out);
+}
 
 #define LM_SLOT(code, name, type) [LM_##code] = decide_##name,
 #define LM_CHANNELS(code, name, type) [LM_##code] = channels_##name,
@@ -113,4 +128,6 @@ const lm_kernels LM_SET = {.name = LM_SET_NAME,
                            .usable = usable,
                            .decide = {LM_READINGS(LM_SLOT)},
                            .channels = {LM_READINGS(LM_CHANNELS)},
+                           .soft_f32 = soft_f32,
+                           .soft_f64 = soft_f64,
                            .pack = LM_PACK};

@@ -40,6 +40,39 @@ struct lm_channels {
 /* n readings, the first of channel 0. */
 typedef void lm_channel_kernel(const lm_channels *channels, const void *x, size_t n, uint8_t out[]);
 
+/* Tables of soft values, a row of segments for each number: polynomial in t = (x - centre) * stretch. */
+enum {
+    LM_SOFT_SEGMENTS = 256,
+    LM_SOFT_CENTRE = LM_SOFT_DEGREE + 1,
+    LM_SOFT_STRETCH,
+    LM_SOFT_ROWS,
+};
+
+struct lm_soft {
+    _Alignas(64) float single_coefficient[LM_SOFT_ROWS][LM_SOFT_SEGMENTS];
+    _Alignas(64) double coefficient[LM_SOFT_ROWS][LM_SOFT_SEGMENTS];
+    lm_slicer narrow, wide; /* to the number of the segment */
+    size_t count;
+    size_t direct_count; /* values at origin + k * step, owned */
+    double *direct;
+    double origin, step;
+    bool single; /* single precision keeps the error bound */
+    lm_soft_exact *exact;
+    const void *context;
+    void *block; /* the allocation that this lies in, aligned */
+};
+
+/* The values of n readings in their segments; segments past the table give anything. */
+typedef void lm_soft_f32_kernel(const float coefficient[][LM_SOFT_SEGMENTS], size_t segments, const float x[],
+                                const uint8_t segment[], size_t n, float out[]);
+typedef void lm_soft_f64_kernel(const double coefficient[][LM_SOFT_SEGMENTS], size_t segments, const double x[],
+                                const uint8_t segment[], size_t n, double out[]);
+lm_soft_f32_kernel lm_soft_f32_plain;
+lm_soft_f64_kernel lm_soft_f64_plain;
+
+/* Copies n readings together, swapping their bytes when asked. */
+void lm_gather(size_t size, const char *x, ptrdiff_t stride, bool swapped, size_t n, void *to);
+
 typedef struct lm_kernels {
     const char *name;
     bool (*usable)(void);
@@ -47,6 +80,8 @@ typedef struct lm_kernels {
     lm_decide_kernel *decide[LM_READING_END];
     lm_bits_kernel *bits[LM_READING_END]; /* NULL: through codes */
     lm_channel_kernel *channels[LM_READING_END];
+    lm_soft_f32_kernel *soft_f32;
+    lm_soft_f64_kernel *soft_f64;
     lm_pack_kernel *pack;
     lm_count_kernel *count; /* NULL: one by one */
 } lm_kernels;

@@ -69,4 +69,6 @@ const lm_kernels lm_kernels_portable = {.name = "portable",
                                         .usable = usable,
                                         .decide = {LM_READINGS(LM_SLOT)},
                                         .channels = {LM_READINGS(LM_CHANNELS)},
+                                        .soft_f32 = lm_soft_f32_plain,
+                                        .soft_f64 = lm_soft_f64_plain,
                                         .pack = lm_pack_plain};

@@ -208,7 +208,7 @@ GATHER(16, __builtin_bswap16)
 GATHER(32, __builtin_bswap32)
 GATHER(64, __builtin_bswap64)
 
-static void gather(size_t size, const char *x, ptrdiff_t stride, bool swapped, size_t n, void *to)
+void lm_gather(size_t size, const char *x, ptrdiff_t stride, bool swapped, size_t n, void *to)
 {
     switch (size) {
     case 1:
@@ -242,7 +242,7 @@ void lm_slicer_decide(const lm_slicer *slicer, const void *x, ptrdiff_t stride, 
         const char *from = (const char *)x + (ptrdiff_t)done * stride;
         uint8_t *to = out + (ptrdiff_t)done * out_stride;
         if (!direct)
-            gather(size, from, stride, swapped, now, readings);
+            lm_gather(size, from, stride, swapped, now, readings);
         decide(slicer, direct ? (const void *)from : readings, now, out_stride == 1 ? to : codes);
         if (out_stride != 1)
             for (size_t i = 0; i < now; i++)
