@@ -197,14 +197,14 @@ typedef struct {
     const struct lm_kernels *kernels;
     lm_reading reading;
     uint32_t count;                      /* levels that a reading of this type can reach */
-    uint32_t depth;                      /* smallest depth >= 1 with 2^depth > count */
+    uint32_t depth;                      /* of the search: 2^depth > count */
     bool plain;                          /* codes[k] == k: no labels to apply */
     uint8_t invalid;                     /* code of NaN */
     uint8_t code[256];                   /* of interval k; entries past count repeat the last */
     uint8_t found[256];                  /* the same, by the bits of the search path, first comparison lowest */
     uint8_t table[256];                  /* 8-bit readings: code of each byte */
     _Alignas(64) uint8_t level[256 * 8]; /* of the reading's type, ascending, padded to 2^depth - 1 with its largest */
-    _Alignas(64) uint8_t node[40 * 64];  /* the levels by step of the search, a whole vector or more each */
+    _Alignas(64) uint8_t node[40 * 64];  /* the levels by step of the search, as the kernels compare them */
 } lm_slicer;
 
 /* levels: ascending (equal ones leave an empty interval), no NaN, at most LM_MAX_LEVELS; codes: count + 1. On failure

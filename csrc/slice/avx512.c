@@ -11,7 +11,10 @@
 #include <immintrin.h>
 #include <string.h>
 
-#define TARGET __attribute__((target("avx512f,avx512bw,avx512dq,avx512vl,avx512vbmi,avx512vpopcntdq,popcnt")))
+/* UBSan would check each of thousands of inlined intrinsics, and compile for minutes; ASan watches all the same. */
+#define TARGET                                                                                                         \
+    __attribute__((target("avx512f,avx512bw,avx512dq,avx512vl,avx512vbmi,avx512vpopcntdq,popcnt"),                     \
+                   no_sanitize("undefined")))
 #define INLINE static inline __attribute__((always_inline)) TARGET
 
 static bool usable(void)
@@ -38,8 +41,6 @@ INLINE __m512i mapped(const map *m, __m512i path, int depth)
     if (depth <= 6)
         return _mm512_permutexvar_epi8(path, m->part[0]);
     __m512i low = _mm512_permutex2var_epi8(m->part[0], path, m->part[1]);
-    if (depth <= 7)
-        return low;
     __m512i high = _mm512_permutex2var_epi8(m->part[2], path, m->part[3]);
     return _mm512_mask_blend_epi8(_mm512_movepi8_mask(path), low, high);
 }
@@ -107,35 +108,64 @@ INLINE uint64_t bits_of(__m512i codes, bool big)
 /* ---- kernels ---- */
 
 #define GE_I(bits, x, level) _mm512_cmpge_epi##bits##_mask(x, level)
-#define GE_U(bits, x, level) _mm512_cmpge_epu##bits##_mask(x, level)
 #define GE_F(bits, x, level) _mm512_cmp_ps_mask(_mm512_castsi512_ps(x), _mm512_castsi512_ps(level), _CMP_GE_OQ)
 #define GE_D(bits, x, level) _mm512_cmp_pd_mask(_mm512_castsi512_pd(x), _mm512_castsi512_pd(level), _CMP_GE_OQ)
-#define AS_IS(x) (x)
-#define F16_LIFT(x) _mm512_xor_si512(x, _mm512_and_si512(_mm512_srai_epi16(x, 15), _mm512_set1_epi16(0x7fff)))
+#define AS_IS(x, turn) ((void)(turn), (x))
+#define TURN(x, turn) _mm512_xor_si512(x, turn)
+#define F16_LIFT(x, turn)                                                                                              \
+    ((void)(turn), _mm512_xor_si512(x, _mm512_and_si512(_mm512_srai_epi16(x, 15), _mm512_set1_epi16(0x7fff))))
 #define NAN_NEVER(x) 0
 #define NAN_F16(x)                                                                                                     \
     _mm512_cmpgt_epi16_mask(_mm512_and_si512(x, _mm512_set1_epi16(0x7fff)), _mm512_set1_epi16(LM_F16_INFINITY))
 #define NAN_F(x) _mm512_cmp_ps_mask(_mm512_castsi512_ps(x), _mm512_castsi512_ps(x), _CMP_UNORD_Q)
 #define NAN_D(x) _mm512_cmp_pd_mask(_mm512_castsi512_pd(x), _mm512_castsi512_pd(x), _CMP_UNORD_Q)
 
+/* What turns unsigned readings into signed ones of the same order; their nodes are turned already. */
+#define TURN_OF(bits)                                                                                                  \
+    INLINE __m512i turn_##bits(lm_reading reading)                                                                     \
+    {                                                                                                                  \
+        return _mm512_set1_epi##bits(reading == LM_U##bits ? (type_##bits)(1ull << (bits - 1)) : 0);                   \
+    }
+TURN_OF(16)
+TURN_OF(32)
+TURN_OF(64)
+
 /* name, type, bits of a lane, comparison, lift to what is compared, mask of NaN, can NaN occur */
 #define KERNEL(name, type, bits, GE, LIFT, NAN_OF, may_be_nan)                                                         \
-    INLINE __m512i codes_##name(const lm_slicer *s, const map *m, __m512i invalid, const __m512i x[bits / 8],          \
-                                int depth)                                                                             \
+    INLINE __m512i search_##name(const uint8_t *node, __m512i key, int depth)                                          \
+    {                                                                                                                  \
+        __m512i path = _mm512_maskz_set1_epi##bits(GE(bits, key, _mm512_load_si512(node)), 1);                         \
+        _Pragma("GCC unroll 8") for (int step = 1; step < depth; step++)                                               \
+        {                                                                                                              \
+            int vectors = (bits / 8 << step) <= 64 ? 1 : (bits / 8 << step) / 64;                                      \
+            __m512i level = lookup_##bits(node + lm_node_offset((uint32_t)step, bits / 8), vectors, path);             \
+            path = _mm512_mask_add_epi##bits(path, GE(bits, key, level), path,                                         \
+                                             _mm512_set1_epi##bits((type_##bits)1 << step));                           \
+        }                                                                                                              \
+        return path;                                                                                                   \
+    }                                                                                                                  \
+                                                                                                                       \
+    /* Long searches are calls: copies of them would only make the object large. */                                    \
+    TARGET static __attribute__((noinline)) __m512i search6_##name(const uint8_t *node, __m512i key)                   \
+    {                                                                                                                  \
+        return search_##name(node, key, 6);                                                                            \
+    }                                                                                                                  \
+                                                                                                                       \
+    TARGET static __attribute__((noinline)) __m512i search8_##name(const uint8_t *node, __m512i key)                   \
+    {                                                                                                                  \
+        return search_##name(node, key, 8);                                                                            \
+    }                                                                                                                  \
+                                                                                                                       \
+    INLINE __m512i codes_##name(const lm_slicer *s, const map *m, __m512i turn, __m512i invalid,                       \
+                                const __m512i x[bits / 8], int depth)                                                  \
     {                                                                                                                  \
         __m512i path[bits / 8];                                                                                        \
         uint64_t lost = 0;                                                                                             \
-        _Pragma("GCC unroll 8") for (int r = 0; r < bits / 8; r++)                                                     \
-        {                                                                                                              \
-            const __m512i key = LIFT(x[r]);                                                                            \
-            path[r] = _mm512_maskz_set1_epi##bits(GE(bits, key, _mm512_load_si512(s->node)), 1);                       \
-            _Pragma("GCC unroll 8") for (int step = 1; step < depth; step++)                                           \
-            {                                                                                                          \
-                int vectors = (bits / 8 << step) <= 64 ? 1 : (bits / 8 << step) / 64;                                  \
-                __m512i level = lookup_##bits(s->node + lm_node_offset((uint32_t)step, bits / 8), vectors, path[r]);   \
-                path[r] = _mm512_mask_add_epi##bits(path[r], GE(bits, key, level), path[r],                            \
-                                                    _mm512_set1_epi##bits((type_##bits)1 << step));                    \
-            }                                                                                                          \
+        for (int r = 0; r < bits / 8; r++) {                                                                           \
+            const __m512i key = LIFT(x[r], turn);                                                                      \
+            path[r] = depth <= 4   ? search_##name(s->node, key, depth)                                                \
+                      : depth == 6 ? search6_##name(s->node, key)                                                      \
+                                   : search8_##name(s->node, key);                                                     \
             lost |= (uint64_t)NAN_OF(x[r]) << (r * (512 / bits) & 63);                                                 \
         }                                                                                                              \
         __m512i codes = mapped(m, pack_##bits(path), depth);                                                           \
@@ -162,15 +192,16 @@ INLINE uint64_t bits_of(__m512i codes, bool big)
     {                                                                                                                  \
         const map m = map_of(s->found);                                                                                \
         const __m512i invalid = _mm512_set1_epi8((char)s->invalid);                                                    \
+        const __m512i turn = turn_##bits(s->reading);                                                                  \
         __m512i v[bits / 8];                                                                                           \
         size_t i = 0;                                                                                                  \
         for (; i + 64 <= n; i += 64) {                                                                                 \
             load_##name(x, i, i + 64, v);                                                                              \
-            _mm512_storeu_si512(out + i, codes_##name(s, &m, invalid, v, depth));                                      \
+            _mm512_storeu_si512(out + i, codes_##name(s, &m, turn, invalid, v, depth));                                \
         }                                                                                                              \
         if (i < n) {                                                                                                   \
             load_##name(x, i, n, v);                                                                                   \
-            _mm512_mask_storeu_epi8(out + i, (1ull << (n - i)) - 1, codes_##name(s, &m, invalid, v, depth));           \
+            _mm512_mask_storeu_epi8(out + i, (1ull << (n - i)) - 1, codes_##name(s, &m, turn, invalid, v, depth));     \
         }                                                                                                              \
     }                                                                                                                  \
                                                                                                                        \
@@ -178,11 +209,12 @@ INLINE uint64_t bits_of(__m512i codes, bool big)
     {                                                                                                                  \
         const map m = map_of(s->found);                                                                                \
         const __m512i invalid = _mm512_set1_epi8((char)s->invalid);                                                    \
+        const __m512i turn = turn_##bits(s->reading);                                                                  \
         __m512i v[bits / 8];                                                                                           \
         size_t lost = 0;                                                                                               \
         for (size_t i = 0; i < n; i += 64) {                                                                           \
             load_##name(x, i, n, v);                                                                                   \
-            __m512i codes = codes_##name(s, &m, invalid, v, depth);                                                    \
+            __m512i codes = codes_##name(s, &m, turn, invalid, v, depth);                                              \
             if (i + 64 > n)                                                                                            \
                 codes = _mm512_maskz_mov_epi8((1ull << (n - i)) - 1, codes);                                           \
             if (may_be_nan)                                                                                            \
@@ -213,25 +245,16 @@ INLINE uint64_t bits_of(__m512i codes, bool big)
         case 4:                                                                                                        \
             run_##name(s, x, n, out, 4);                                                                               \
             break;                                                                                                     \
-        case 5:                                                                                                        \
-            run_##name(s, x, n, out, 5);                                                                               \
-            break;                                                                                                     \
         case 6:                                                                                                        \
             run_##name(s, x, n, out, 6);                                                                               \
-            break;                                                                                                     \
-        case 7:                                                                                                        \
-            run_##name(s, x, n, out, 7);                                                                               \
             break;                                                                                                     \
         default:                                                                                                       \
             run_##name(s, x, n, out, 8);                                                                               \
         }                                                                                                              \
     }
-KERNEL(i16, int16_t, 16, GE_I, AS_IS, NAN_NEVER, false)
-KERNEL(u16, uint16_t, 16, GE_U, AS_IS, NAN_NEVER, false)
-KERNEL(i32, int32_t, 32, GE_I, AS_IS, NAN_NEVER, false)
-KERNEL(u32, uint32_t, 32, GE_U, AS_IS, NAN_NEVER, false)
-KERNEL(i64, int64_t, 64, GE_I, AS_IS, NAN_NEVER, false)
-KERNEL(u64, uint64_t, 64, GE_U, AS_IS, NAN_NEVER, false)
+KERNEL(i16, int16_t, 16, GE_I, TURN, NAN_NEVER, false)
+KERNEL(i32, int32_t, 32, GE_I, TURN, NAN_NEVER, false)
+KERNEL(i64, int64_t, 64, GE_I, TURN, NAN_NEVER, false)
 KERNEL(f16, uint16_t, 16, GE_I, F16_LIFT, NAN_F16, true)
 KERNEL(f32, float, 32, GE_F, AS_IS, NAN_F, true)
 KERNEL(f64, double, 64, GE_D, AS_IS, NAN_D, true)
@@ -249,6 +272,12 @@ TARGET static void decide_bytes(const lm_slicer *s, const void *readings, size_t
 }
 #define decide_i8 decide_bytes
 #define decide_u8 decide_bytes
+#define decide_u16 decide_i16
+#define bits_u16 bits_i16
+#define decide_u32 decide_i32
+#define bits_u32 bits_i32
+#define decide_u64 decide_i64
+#define bits_u64 bits_i64
 #define bits_i8 NULL
 #define bits_u8 NULL
 

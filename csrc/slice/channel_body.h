@@ -8,13 +8,13 @@
     INLINE void run_block_##name(const lm_channels *c, const type *x, size_t at, bool own, uint8_t out[])              \
     {                                                                                                                  \
         keys_##name v[sizeof(type)];                                                                                   \
-        lanes_##name sum[sizeof(type)];                                                                                \
+        sums_##name sum[sizeof(type)];                                                                                 \
         const lane *last = c->last, *step = c->step;                                                                   \
         _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
         {                                                                                                              \
             v[r] = LIFT(name, *(const vec_##name *)(x + r * LANES(type)));                                             \
-            sum[r] = own ? (lanes_##name)(*(const loaded_##name *)(last + at + r * LANES(type)))                       \
-                         : (lanes_##name){0} + (lane)c->code[c->count];                                                \
+            sum[r] = own ? (sums_##name)(*(const loaded_##name *)(last + at + r * LANES(type)))                        \
+                         : (sums_##name){0} + (u##lane)c->code[c->count];                                              \
         }                                                                                                              \
         for (size_t j = 0; j < c->count; j++) {                                                                        \
             const type *level = (const type *)c->level + j * c->width + at;                                            \
@@ -22,15 +22,16 @@
             _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                          \
             {                                                                                                          \
                 lanes_##name below = v[r] < LEVEL(name, *(const vec_##name *)(level + r * LANES(type)));               \
-                sum[r] += below &                                                                                      \
-                          (own ? (lanes_##name)(*(const loaded_##name *)(step + j * c->width + at + r * LANES(type)))  \
-                               : (lanes_##name){0} + fall);                                                            \
+                lanes_##name here = {0};                                                                               \
+                here = own ? (lanes_##name)(*(const loaded_##name *)(step + j * c->width + at + r * LANES(type)))      \
+                           : here + fall;                                                                              \
+                sum[r] += (sums_##name)(below & here);                                                                 \
             }                                                                                                          \
         }                                                                                                              \
         _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
         {                                                                                                              \
             lanes_##name lost = IS_NAN(name, *(const vec_##name *)(x + r * LANES(type)));                              \
-            sum[r] = (sum[r] & ~lost) | (lost & (lane)c->invalid);                                                     \
+            sum[r] = (sum[r] & (sums_##name) ~lost) | (sums_##name)(lost & (lane)c->invalid);                          \
             *(bytes_##name *)(out + r * LANES(type)) = __builtin_convertvector(sum[r], bytes_##name);                  \
         }                                                                                                              \
     }                                                                                                                  \

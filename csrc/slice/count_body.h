@@ -17,22 +17,22 @@ enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 
                              lane invalid, bool plain, uint8_t out[])                                                  \
     {                                                                                                                  \
         keys_##name v[sizeof(type)];                                                                                   \
-        lanes_##name sum[sizeof(type)];                                                                                \
+        sums_##name sum[sizeof(type)];                                                                                 \
         _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
         {                                                                                                              \
             v[r] = LIFT(name, *(const vec_##name *)(x + r * LANES(type)));                                             \
-            sum[r] = (lanes_##name){0} + last;                                                                         \
+            sum[r] = (sums_##name){0} + (u##lane)last;                                                                 \
         }                                                                                                              \
         for (size_t j = 0; j < count; j++)                                                                             \
             _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                          \
             {                                                                                                          \
                 lanes_##name below = v[r] < level[j];                                                                  \
-                sum[r] += plain ? below : below & step[j];                                                             \
+                sum[r] += (sums_##name)(plain ? below : below & step[j]);                                              \
             }                                                                                                          \
         _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
         {                                                                                                              \
             lanes_##name lost = IS_NAN(name, *(const vec_##name *)(x + r * LANES(type)));                              \
-            sum[r] = (sum[r] & ~lost) | (lost & invalid);                                                              \
+            sum[r] = (sum[r] & (sums_##name) ~lost) | (sums_##name)(lost & invalid);                                   \
             *(bytes_##name *)(out + r * LANES(type)) = __builtin_convertvector(sum[r], bytes_##name);                  \
         }                                                                                                              \
     }                                                                                                                  \

@@ -10,6 +10,7 @@
 #define TYPES(name, type, lane, key)                                                                                   \
     typedef type vec_##name __attribute__((vector_size(LM_VECTOR), aligned(sizeof(type)), may_alias));                 \
     typedef lane lanes_##name __attribute__((vector_size(LM_VECTOR)));                                                 \
+    typedef u##lane sums_##name __attribute__((vector_size(LM_VECTOR))); /* they wrap */                               \
     typedef lane loaded_##name __attribute__((vector_size(LM_VECTOR), aligned(sizeof(type)), may_alias));              \
     typedef key keys_##name __attribute__((vector_size(LM_VECTOR)));                                                   \
     typedef uint8_t bytes_##name __attribute__((vector_size(LANES(type)), aligned(1), may_alias));

@@ -129,12 +129,15 @@ static uint32_t reversed(uint32_t path, uint32_t depth)
  * of the path index the next step's nodes. */
 static void lay_out_search(lm_slicer *s, size_t size)
 {
+    const bool is_unsigned = s->reading == LM_U16 || s->reading == LM_U32 || s->reading == LM_U64;
     for (uint32_t step = 0; step < s->depth; step++) {
         uint8_t *nodes = s->node + lm_node_offset(step, size);
         size_t filled = (size_t)1 << step;
         for (uint32_t path = 0; path < filled; path++) {
             uint32_t k = reversed(path, s->depth) + (1u << (s->depth - 1 - step)) - 1;
             memcpy(nodes + path * size, s->level + k * size, size);
+            if (is_unsigned && size > 1)
+                nodes[path * size + size - 1] ^= 0x80; /* little-endian, as all that search are */
         }
         for (; filled * size < 64; filled *= 2) /* repeat, so that every lane is defined */
             memcpy(nodes + filled * size, nodes, filled * size);
@@ -174,6 +177,8 @@ lm_status lm_slicer_init(lm_slicer *out, lm_reading reading, const double levels
     out->depth = 1;
     while (1u << out->depth <= reached)
         out->depth++;
+    if (out->kernels->searches && (out->depth == 5 || out->depth == 7))
+        out->depth++; /* they are made for these depths: 1, 2, 3, 4, 6, 8 */
     for (uint32_t i = reached; i < (1u << out->depth) - 1; i++)
         largest_of[reading](out->level + i * size);
 
