@@ -5,10 +5,12 @@ Foreign libraries are recognised by name among the modules that are already impo
 
 from __future__ import annotations
 
+import functools
 import math
 import os
 import sys
 import threading
+import time
 from typing import Any
 
 import numpy as np
@@ -43,6 +45,12 @@ def as_codes(codes: Any, invalid: int = 255) -> np.ndarray:
     return np.ascontiguousarray(array)
 
 
+@functools.lru_cache(maxsize=1)
+def _threads_available(moment: int) -> int:
+    """Asked anew every few seconds: quotas change, but reading them takes longer than slicing a million readings."""
+    return _core.threads_available()
+
+
 def thread_count(threads: int | None, size: int) -> int:
     """Threads for `size` readings: as asked, else LIMEN_THREADS or the processors this process may use.
 
@@ -54,7 +62,7 @@ def thread_count(threads: int | None, size: int) -> int:
             return 1
         wanted = os.environ.get("LIMEN_THREADS", "")
         if not wanted:
-            return _core.threads_available()
+            return _threads_available(int(time.monotonic() / 5))
         if not wanted.isdecimal() or int(wanted) < 1:
             raise ValueError(f"LIMEN_THREADS is {wanted!r}; expected a whole number of at least 1")
         return int(wanted)

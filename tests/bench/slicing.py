@@ -7,14 +7,17 @@
 from __future__ import annotations
 
 import argparse
-import sys
+import os
+import tempfile
 import time
 from pathlib import Path
+from types import SimpleNamespace
 
 import numpy as np
 
 import limen as lm
 from limen._arrays import decide_any, pack_any, tally_any
+from limen.streaming import stream, tally_stream
 
 ROWS: list[tuple[str, float, float | None, str]] = []
 
@@ -113,20 +116,118 @@ def overhead():
     show("a list of three: microseconds", listed * 1e6, 50)
 
 
+RULE = SimpleNamespace(levels=np.array([1.0, 2.0, 3.0]), decisions=np.arange(4), names=tuple("abcd"), invalid=255)
+
+
+def resident(field="VmRSS"):
+    """Megabytes of this process."""
+    with open("/proc/self/status") as status:
+        return next(int(line.split()[1]) for line in status if line.startswith(field)) / 1024
+
+
+def streams(size):
+    """A recording on disk, mapped: as fast as summing it, and never in memory as a whole."""
+    with tempfile.TemporaryDirectory() as folder:
+        path = os.path.join(folder, "recording.raw")
+        part = readings("float32", 1 << 22, 4)
+        with open(path, "wb") as file:
+            for _ in range(max(1, size // part.nbytes)):
+                file.write(part.data)
+        mapped = np.memmap(path, np.float32, "r")
+        with open("/proc/self/clear_refs", "w") as peak:
+            peak.write("5")
+        before = resident()
+        start = time.perf_counter()
+        tally = tally_stream(RULE, mapped)
+        counting = time.perf_counter() - start
+        codes = os.path.join(folder, "codes.raw")
+        start = time.perf_counter()
+        stream(RULE, mapped, codes)
+        deciding = time.perf_counter() - start
+        grown = resident("VmHWM") - before
+        start = time.perf_counter()
+        mapped.sum()
+        summing = time.perf_counter() - start
+        note = f"{mapped.nbytes / 1e9:.1f} GB, {tally.total / counting / 1e9:.2f} G readings/s"
+        show("tally of a memmap: of the speed of summing it", summing / counting, 0.9, note)
+        show("codes of a memmap to a file: of the speed of summing it", summing / deciding)
+        show("megabytes of memory above the start", grown, 200)
+
+
+def growth(most):
+    """Nanoseconds a reading from 1e5 readings on, by stream from one chunk given again and again."""
+    part = readings("float32", 1 << 20, 4)
+    n = 100_000
+    while n <= most:
+        def chunks(left=n):
+            while left > 0:
+                yield part[:left]
+                left -= part.size
+        start = time.perf_counter()
+        assert tally_stream(RULE, chunks()).total == n
+        show(f"{n:.0e} readings by stream: ns a reading", (time.perf_counter() - start) / n * 1e9)
+        n *= 10
+
+
+def picture(path):
+    """Readings per second against levels and against size, with the speed of one comparison drawn in."""
+    import matplotlib
+
+    matplotlib.use("Agg")
+    from matplotlib import pyplot as plt
+
+    def speeds(x, counts_of_levels):
+        out, flags = np.empty(x.size, np.uint8), np.empty(x.size, bool)
+        result = []
+        for count in counts_of_levels:
+            levels = np.linspace(0, 4, count + 2)[1:-1]
+            codes = np.arange(count + 1, dtype=np.uint8)
+            limit, ours = seconds(lambda: np.greater_equal(x, x.dtype.type(2), out=flags),
+                                  lambda: decide_any(x, levels, codes, out=out, threads=1), repeats=5)
+            result.append((x.size / limit, x.size / ours))
+        return np.array(result) / 1e9
+
+    figure, (left, right) = plt.subplots(1, 2, figsize=(10, 4), layout="constrained", sharey=True)
+    counts = [1, 2, 3, 7, 15, 16, 31, 63, 127, 254]
+    for dtype in ("float32", "float64", "int16"):
+        x = readings(dtype, 8_000_000, 4)
+        if dtype == "int16":
+            x //= 1000
+        values = speeds(x, counts)
+        line, = left.plot(counts, values[:, 1], "o-", label=dtype)
+        left.axhline(np.median(values[:, 0]), color=line.get_color(), ls=":")
+    sizes = [1000, 10_000, 100_000, 1_000_000, 10_000_000, 32_000_000]
+    values = np.array([speeds(readings("float32", n, 4), [3])[0] for n in sizes])
+    right.plot(sizes, values[:, 1], "o-", label="float32, 3 levels")
+    right.plot(sizes, values[:, 0], ":", color="C0", label="one comparison by NumPy")
+    left.set(xscale="log", xlabel="levels", ylabel="readings per nanosecond", ylim=(0, None),
+             title="one thread, 8 million readings; dotted: one comparison")
+    right.set(xscale="log", xlabel="readings", title="by size")
+    left.legend()
+    right.legend()
+    figure.savefig(path)
+    print(f"picture: {path}")
+
+
 def main():
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--readings", type=int, default=32_000_000)
-    parser.add_argument("--quick", action="store_true", help="a tenth of the readings, no picture")
+    parser.add_argument("--file", type=float, default=4.0, help="gigabytes of the recording that is streamed")
+    parser.add_argument("--most", type=float, default=1e9, help="readings of the longest stream")
+    parser.add_argument("--quick", action="store_true", help="a tenth of everything")
     options = parser.parse_args()
-    n = options.readings // (10 if options.quick else 1) // 64 * 64
+    part = 10 if options.quick else 1
+    n = options.readings // part // 64 * 64
     info = lm.build_info()
     print(f"limen {info['version']}, kernels {info['kernels']}, {info['threads']} threads, {n} readings\n"
           f"{'':58} {'measured':>9} {'wanted':>7}")
     kernels(n, info["threads"])
     passes(n)
     overhead()
+    growth(options.most / part)
+    streams(int(options.file * 2**30) // part)
+    picture(Path(__file__).with_name("slicing.png"))
 
 
 if __name__ == "__main__":
-    sys.path.insert(0, str(Path(__file__).parent))
     main()
