@@ -329,8 +329,12 @@ LM_API LM_MUST_USE lm_status lm_log_ratio_new(const lm_density *a, const lm_dens
 LM_API void lm_log_ratio_free(lm_log_ratio *ratio);
 LM_API LM_MUST_USE lm_status lm_log_ratio_values(const void *ratio, const double x[], double out[], size_t n);
 
-/* A compiled table of it, within 1e-6 of max(1, |LLR|) for readings and results of single precision and better; it
- * borrows the ratio. */
+/* The same object for the posterior of one state: its values are P(state | x), which priors weigh. */
+LM_API LM_MUST_USE lm_status lm_posterior_new(const lm_density *const densities[], const double priors[],
+                                              size_t states, size_t state, lm_log_ratio **out, lm_fault *fault);
+
+/* A compiled table of either, within 1e-6 of max(1, |value|) for readings and results of single precision and better;
+ * it borrows the ratio. */
 LM_API LM_MUST_USE lm_status lm_log_ratio_compile(const lm_log_ratio *ratio, lm_soft **out);
 
 /* ---- evidence: what recordings say ------------------------------------------------------------------------------

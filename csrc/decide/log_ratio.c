@@ -1,7 +1,8 @@
-/* The log likelihood ratio of two densities at a reading, without cancellation. */
+/* Log likelihood ratios and posteriors at a reading, without cancellation, and their tables. */
 #include <math.h>
 
 #include "../numeric/fault.h"
+#include "../numeric/logspace.h"
 #include "../numeric/memory.h"
 #include "crossings.h"
 #include "log_ratio.h"
@@ -15,48 +16,90 @@ static bool has_atoms(const lm_density *density)
     return false;
 }
 
-static void add_terms(lm_log_ratio *ratio, const lm_density *density, bool positive)
+static void add_terms(lm_log_ratio *ratio, const lm_law *law)
 {
-    for (size_t t = 0; t < density->count; t++) {
-        const lm_term *term = &density->term[t];
-        ratio->gap.term[ratio->gap.count++] = (lm_gap_term){
-            .term = *term,
-            .positive = positive,
-            .support = lm_term_support(term),
-            .log_scale = term->family->lattice || term->scale == 1 ? 0 : log(fabs(term->scale)),
-        };
+    for (size_t t = 0; t < law->density->count; t++) {
+        const lm_term *term = &law->density->term[t];
+        lm_gap_term *to = &ratio->gap.term[ratio->gap.count++];
+        *to = (lm_gap_term){.term = *term, .positive = law->positive, .support = lm_term_support(term)};
+        to->term.log_weight += law->log_prior;
+        to->log_scale = term->family->lattice || term->scale == 1 ? 0 : log(fabs(term->scale));
         ratio->fallible = ratio->fallible || term->family->fallible;
     }
 }
 
-lm_status lm_log_ratio_new(const lm_density *a, const lm_density *b, lm_log_ratio **out, lm_fault *fault)
+static lm_status from_laws(const lm_law laws[], size_t count, bool probability, lm_log_ratio **out, lm_fault *fault)
 {
     *out = NULL;
-    if (lm_density_discrete(a) != lm_density_discrete(b))
-        return lm_refuse(fault, LM_MIXED, "states", NAN, -1, "counts in both states, or in neither");
+    size_t terms = 0;
+    for (size_t i = 0; i < count; i++) {
+        terms += laws[i].density->count;
+        if (lm_density_discrete(laws[i].density) != lm_density_discrete(laws[0].density))
+            return lm_refuse(fault, LM_MIXED, "states", NAN, -1, "counts in every state, or in none");
+    }
     lm_log_ratio *ratio = lm_allocate_zeroed(1, sizeof *ratio);
     if (ratio == NULL)
         return LM_NO_MEMORY;
-    ratio->density[0] = lm_density_retain(a);
-    ratio->density[1] = lm_density_retain(b);
-    ratio->masses = has_atoms(a) || has_atoms(b);
-    ratio->gap.term = lm_allocate(a->count + b->count, sizeof *ratio->gap.term);
-    if (ratio->gap.term == NULL) {
+    ratio->probability = probability;
+    ratio->law = lm_allocate(count, sizeof *ratio->law);
+    ratio->gap.term = lm_allocate(terms, sizeof *ratio->gap.term);
+    if (ratio->law == NULL || ratio->gap.term == NULL) {
         lm_log_ratio_free(ratio);
         return LM_NO_MEMORY;
     }
-    add_terms(ratio, a, true);
-    add_terms(ratio, b, false);
+    for (size_t i = 0; i < count; i++) {
+        ratio->law[ratio->laws] = laws[i];
+        ratio->law[ratio->laws++].density = lm_density_retain(laws[i].density);
+        ratio->masses = ratio->masses || has_atoms(laws[i].density);
+        add_terms(ratio, &laws[i]);
+    }
     *out = ratio;
     return LM_OK;
+}
+
+lm_status lm_log_ratio_new(const lm_density *a, const lm_density *b, lm_log_ratio **out, lm_fault *fault)
+{
+    lm_law laws[2] = {{.positive = true}, {.positive = false}};
+    laws[0].density = lm_density_retain(a); /* from_laws retains for itself */
+    laws[1].density = lm_density_retain(b);
+    lm_status status = from_laws(laws, 2, false, out, fault);
+    lm_density_release(laws[0].density);
+    lm_density_release(laws[1].density);
+    return status;
+}
+
+lm_status lm_posterior_new(const lm_density *const densities[], const double priors[], size_t states, size_t state,
+                           lm_log_ratio **out, lm_fault *fault)
+{
+    *out = NULL;
+    lm_law *laws = lm_allocate(states, sizeof *laws);
+    if (laws == NULL)
+        return LM_NO_MEMORY;
+    lm_status status = LM_OK;
+    size_t count = 0;
+    for (size_t i = 0; i < states && status == LM_OK; i++) {
+        if (!(priors[i] >= 0 && isfinite(priors[i])))
+            status = lm_refuse(fault, LM_DOMAIN, "priors", priors[i], (ptrdiff_t)i, "a finite number >= 0");
+        else if (priors[i] > 0)
+            laws[count++] = (lm_law){lm_density_retain(densities[i]), log(priors[i]), i == state};
+    }
+    if (status == LM_OK && count == 0)
+        status = lm_refuse(fault, LM_DOMAIN, "sum of priors", 0, -1, "1 within 1e-9");
+    if (status == LM_OK)
+        status = from_laws(laws, count, true, out, fault);
+    for (size_t i = 0; i < count; i++)
+        lm_density_release(laws[i].density);
+    lm_release(laws);
+    return status;
 }
 
 void lm_log_ratio_free(lm_log_ratio *ratio)
 {
     if (ratio == NULL)
         return;
-    lm_density_release(ratio->density[0]);
-    lm_density_release(ratio->density[1]);
+    for (size_t i = 0; i < ratio->laws; i++)
+        lm_density_release(ratio->law[i].density);
+    lm_release(ratio->law);
     lm_release(ratio->gap.term);
     lm_release(ratio);
 }
@@ -65,20 +108,26 @@ void lm_log_ratio_free(lm_log_ratio *ratio)
  * are zero. */
 static lm_status by_masses(const lm_log_ratio *ratio, const double x[], double out[], size_t n)
 {
-    double part[64];
-    for (size_t done = 0; done < n; done += LM_LENGTH(part)) {
-        size_t now = n - done < LM_LENGTH(part) ? n - done : LM_LENGTH(part);
-        LM_TRY(lm_density_log_pdf(ratio->density[0], x + done, out + done, now));
-        LM_TRY(lm_density_log_pdf(ratio->density[1], x + done, part, now));
+    enum { FEW = 64 };
+    double value[FEW], sum[2][FEW];
+    for (size_t done = 0; done < n; done += FEW) {
+        size_t now = n - done < FEW ? n - done : FEW;
         for (size_t i = 0; i < now; i++)
-            out[done + i] -= part[i];
+            sum[0][i] = sum[1][i] = -INFINITY;
+        for (size_t k = 0; k < ratio->laws; k++) {
+            const lm_law *law = &ratio->law[k];
+            LM_TRY(lm_density_log_pdf(law->density, x + done, value, now));
+            for (size_t i = 0; i < now; i++)
+                sum[law->positive][i] = lm_log_add(sum[law->positive][i], value[i] + law->log_prior);
+        }
+        for (size_t i = 0; i < now; i++)
+            out[done + i] = sum[1][i] - sum[0][i];
     }
     return LM_OK;
 }
 
-lm_status lm_log_ratio_values(const void *context, const double x[], double out[], size_t n)
+static lm_status log_odds(const lm_log_ratio *ratio, const double x[], double out[], size_t n)
 {
-    const lm_log_ratio *ratio = context;
     if (ratio->masses)
         return by_masses(ratio, x, out, n);
     lm_gap gap = ratio->gap; /* its workspace is this call's own, so that threads do not meet */
@@ -93,6 +142,15 @@ lm_status lm_log_ratio_values(const void *context, const double x[], double out[
     }
     lm_release(gap.bound);
     return status;
+}
+
+lm_status lm_log_ratio_values(const void *context, const double x[], double out[], size_t n)
+{
+    const lm_log_ratio *ratio = context;
+    LM_TRY(log_odds(ratio, x, out, n));
+    for (size_t i = 0; ratio->probability && i < n; i++)
+        out[i] = out[i] < 0 ? exp(out[i]) / (1 + exp(out[i])) : 1 / (1 + exp(-out[i]));
+    return LM_OK;
 }
 
 /* ---- its table ---- */
@@ -127,10 +185,10 @@ static lm_status survey(const lm_log_ratio *ratio, lm_points *breaks, lm_soft_fu
         high = fmax(high, first);
         function->scale = fmin(function->scale, fabs(term->scale));
     }
-    for (int k = 0; k < 2; k++) {
+    for (size_t k = 0; k < ratio->laws; k++) {
         double edge[2];
-        LM_TRY(lm_density_quantile(ratio->density[k], RARE, false, &edge[0]));
-        LM_TRY(lm_density_quantile(ratio->density[k], RARE, true, &edge[1]));
+        LM_TRY(lm_density_quantile(ratio->law[k].density, RARE, false, &edge[0]));
+        LM_TRY(lm_density_quantile(ratio->law[k].density, RARE, true, &edge[1]));
         function->bulk.low = fmin(function->bulk.low, edge[0]);
         function->bulk.high = fmax(function->bulk.high, edge[1]);
     }
@@ -151,10 +209,10 @@ static lm_status compile_masses(const lm_log_ratio *ratio, lm_soft **out)
     lm_soft_plan plan = {.exact = lm_log_ratio_values, .context = ratio, .origin = term->shift};
     plan.step = fabs(term->scale);
     double low = INFINITY, high = -INFINITY;
-    for (int k = 0; k < 2 && lm_density_discrete(ratio->density[k]); k++) {
+    for (size_t k = 0; k < ratio->laws && lm_density_discrete(ratio->law[k].density); k++) {
         double edge[2];
-        LM_TRY(lm_density_quantile(ratio->density[k], RARE, false, &edge[0]));
-        LM_TRY(lm_density_quantile(ratio->density[k], RARE, true, &edge[1]));
+        LM_TRY(lm_density_quantile(ratio->law[k].density, RARE, false, &edge[0]));
+        LM_TRY(lm_density_quantile(ratio->law[k].density, RARE, true, &edge[1]));
         low = fmin(low, edge[0]);
         high = fmax(high, edge[1]);
     }

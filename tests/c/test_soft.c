@@ -77,6 +77,54 @@ static void check_pair(const char *what, lm_density *a, lm_density *b, double ce
     lm_density_release(b);
 }
 
+/* Three states: posteriors are in [0, 1], sum to 1, and follow from the log densities. */
+static void check_posteriors(void)
+{
+    lm_density *state[3] = {gaussians((double[]){1}, (double[][2]){{0, 1}}, 1),
+                            gaussians((double[]){1}, (double[][2]){{1.5, 0.5}}, 1),
+                            gaussians((double[]){0.5, 0.5}, (double[][2]){{4, 1}, {3, 3}}, 2)};
+    const double prior[3] = {0.2, 0.5, 0.3};
+    enum { FEW = 3000 };
+    static double x[FEW], sum[FEW], p[FEW], exact[FEW], log_pdf[3][FEW];
+    for (size_t i = 0; i < FEW; i++)
+        x[i] = -12 + 24.0 * (double)i / FEW;
+    for (size_t k = 0; k < 3; k++)
+        CHECK(lm_density_log_pdf(state[k], x, log_pdf[k], FEW) == LM_OK);
+    for (size_t k = 0; k < 3; k++) {
+        lm_log_ratio *ratio;
+        lm_soft *soft;
+        CHECK(lm_posterior_new((const lm_density *const *)state, prior, 3, k, &ratio, NULL) == LM_OK);
+        CHECK(lm_log_ratio_compile(ratio, &soft) == LM_OK);
+        CHECK(lm_soft_values(soft, LM_F64, x, sizeof *x, false, FEW, LM_SOFT_F64, 1, p, sizeof *p) == LM_OK);
+        CHECK(lm_log_ratio_values(ratio, x, exact, FEW) == LM_OK);
+        double worst = 0, worst_exact = 0;
+        for (size_t i = 0; i < FEW; i++) {
+            double all = 0;
+            for (size_t j = 0; j < 3; j++)
+                all += prior[j] * exp(log_pdf[j][i]);
+            const double wanted = prior[k] * exp(log_pdf[k][i]) / all;
+            worst = fmax(worst, fabs(p[i] - wanted));
+            worst_exact = fmax(worst_exact, fabs(exact[i] - wanted));
+            sum[i] += p[i];
+        }
+        CHECK(worst <= 1e-6);
+        CHECK(worst_exact <= 1e-13); /* a few roundings of logarithms near 70 */
+        lm_soft_free(soft);
+        lm_log_ratio_free(ratio);
+    }
+    double worst = 0;
+    for (size_t i = 0; i < FEW; i++)
+        worst = fmax(worst, fabs(sum[i] - 1));
+    CHECK(worst <= 3e-6);
+    lm_log_ratio *none;
+    lm_fault fault;
+    CHECK(lm_posterior_new((const lm_density *const *)state, (double[]){0.5, -1, 1.5}, 3, 0, &none, &fault) ==
+          LM_DOMAIN);
+    CHECK(none == NULL && fault.index == 1);
+    for (size_t k = 0; k < 3; k++)
+        lm_density_release(state[k]);
+}
+
 static void check_allocations(void)
 {
     lm_density *a = gaussians((double[]){1}, (double[][2]){{0, 1}}, 1);
@@ -118,6 +166,7 @@ int main(void)
                gaussians((double[]){0.25, 0.25, 0.25, 0.25}, (double[][2]){{0, 0.1}, {2, 0.1}, {4, 0.1}, {6, 0.1}}, 4),
                gaussians((double[]){0.25, 0.25, 0.25, 0.25}, (double[][2]){{1, 0.1}, {3, 0.1}, {5, 0.1}, {7, 0.1}}, 4),
                3.5, 3);
+    check_posteriors();
     check_allocations();
     return check_report();
 }
