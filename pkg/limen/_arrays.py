@@ -136,7 +136,7 @@ def decide_any(x: Any, levels: Any, codes: Any, *, invalid: int = 255, out: np.n
     """
     if type(x) is not np.ndarray:
         special = _special(x, out, lambda a, n: decide_any(a, levels, codes, invalid=invalid, threads=n), threads,
-                           (levels, codes, invalid))
+                           invalid, lambda: _dask(x, levels, codes, invalid))
         if special is not None:
             return special
     array = as_readings(x)
@@ -182,27 +182,27 @@ def _decide_channels(x: np.ndarray, levels: np.ndarray, codes: np.ndarray, inval
     return result
 
 
-def _special(x: Any, out: Any, run: Any, threads: int | None, rule: tuple) -> Any:
+def _special(x: Any, out: Any, run: Any, threads: int | None, fill: Any, lazily: Any) -> Any:
     """The answer for masked, pandas, xarray and dask objects; None for everything else.
 
-    run(array, threads) decides a NumPy (or, from xarray, any) array.
+    run(array, threads) serves a NumPy (or, from xarray, any) array; fill marks what is masked or missing; lazily()
+    makes the dask array.
     """
     if isinstance(x, np.ma.MaskedArray):
-        codes = run(x.data, threads)
+        values = np.asarray(run(x.data, threads))
         mask = np.ma.getmaskarray(x)
-        codes = np.asarray(codes)
-        codes[mask] = rule[2]
-        result: Any = np.ma.array(codes, mask=mask, copy=False)
+        values[mask] = fill
+        result: Any = np.ma.array(values, mask=mask, copy=False)
     elif _is(x, "pandas", "Series", "Index"):
-        result = _like_pandas(x, _pandas_values(x, run, threads, rule[2]))
+        result = _like_pandas(x, _pandas_values(x, run, threads, fill))
     elif _is(x, "pandas", "DataFrame"):
-        columns = [_pandas_values(x.iloc[:, i], run, threads, rule[2]) for i in range(x.shape[1])]
+        columns = [_pandas_values(x.iloc[:, i], run, threads, fill) for i in range(x.shape[1])]
         result = sys.modules["pandas"].DataFrame(dict(enumerate(columns)), index=x.index)
         result.columns = x.columns
     elif _is(x, "xarray", "DataArray", "Dataset", "Variable"):
         result = sys.modules["xarray"].apply_ufunc(lambda a: run(a, threads), x, dask="allowed")
     elif _is(x, "dask.array", "Array"):
-        result = _dask(x, run, rule)
+        result = lazily()
     else:
         return None
     if out is not None:
@@ -211,8 +211,8 @@ def _special(x: Any, out: Any, run: Any, threads: int | None, rule: tuple) -> An
     return result
 
 
-def _pandas_values(series: Any, run: Any, threads: int | None, invalid: int) -> np.ndarray:
-    """Codes of a pandas Series or Index; missing values of nullable types get the invalid code."""
+def _pandas_values(series: Any, run: Any, threads: int | None, fill: Any) -> np.ndarray:
+    """Values for a pandas Series or Index; missing ones of nullable types get the fill."""
     if isinstance(series.dtype, np.dtype):
         return np.asarray(run(series.to_numpy(), threads))
     numpy_dtype = getattr(series.dtype, "numpy_dtype", None)
@@ -220,13 +220,12 @@ def _pandas_values(series: Any, run: Any, threads: int | None, invalid: int) -> 
         raise TypeError(f"x holds {series.dtype}; expected real numbers of at most 64 bits")
     missing = np.asarray(series.isna())
     codes = np.asarray(run(series.fillna(0).to_numpy(dtype=numpy_dtype), threads))
-    codes[missing] = invalid
+    codes[missing] = fill
     return codes
 
 
-def _dask(x: Any, run: Any, rule: tuple) -> Any:
+def _dask(x: Any, levels: Any, codes: Any, invalid: int) -> Any:
     """A lazy dask array of codes; the scheduler has the threads, so each block is decided by one."""
-    levels, codes, invalid = rule
     levels = as_levels(levels, axes=True)
     codes = as_codes(codes, invalid)
     if levels.ndim == 1 and codes.ndim == 1:
@@ -514,3 +513,35 @@ def _like_pandas(x: Any, codes: np.ndarray) -> Any:
     if isinstance(x, pandas.Index):
         return pandas.Index(codes, name=x.name)
     return pandas.Series(codes, index=x.index, name=x.name)
+
+
+def soft_any(x: Any, soft: Any, *, out: np.ndarray | None = None, threads: int | None = None) -> Any:
+    """Soft values of the readings x, of any kind of array; what comes back is of the same kind.
+
+    Parameters
+    ----------
+    x : as for decide_any
+    soft : Soft
+        Its table fills arrays of its dtype; `fill` marks NaN and missing readings.
+    out : ndarray of that dtype and of the shape of x, optional
+    threads : int, optional
+    """
+    if type(x) is not np.ndarray:
+        special = _special(x, out, lambda a, n: soft_any(a, soft, threads=n), threads, soft.fill,
+                           lambda: x.map_blocks(soft, threads=1, dtype=soft.dtype,
+                                                meta=np.empty((0,) * x.ndim, soft.dtype)))
+        if special is not None:
+            return special
+    array = as_readings(x)
+    if out is None:
+        result = np.empty_like(array, dtype=soft.dtype, subok=False)
+    else:
+        if not isinstance(out, np.ndarray) or out.dtype != soft.dtype:
+            raise TypeError(f"out is {getattr(out, 'dtype', type(out).__name__)}; expected an array of {soft.dtype}")
+        if out.shape != array.shape:
+            raise ValueError(f"out has shape {out.shape}; expected {array.shape}")
+        if np.may_share_memory(array, out):
+            array = array.copy()
+        result = out
+    soft.table.values(array, result, soft.step or 1.0, thread_count(threads, array.size))
+    return result[()] if out is None and array.ndim == 0 else result
