@@ -1,9 +1,11 @@
 /* limen._core.Soft: a log likelihood ratio or a posterior by its compiled table, over arrays of any layout. */
 #include "slice.h"
 
-#if __has_include("density.h") /* a build without densities has no soft outputs */
+#define LM_DENSITIES "density.h"
+#if __has_include(LM_DENSITIES) /* a build without densities has no soft outputs */
+#include LM_DENSITIES
+
 #include "../numeric/memory.h"
-#include "density.h"
 
 typedef struct {
     PyObject_HEAD lm_log_ratio *ratio;
