@@ -114,11 +114,25 @@ INLINE uint64_t bits_of(__m512i codes, bool big)
 #define TURN(x, turn) _mm512_xor_si512(x, turn)
 #define F16_LIFT(x, turn)                                                                                              \
     ((void)(turn), _mm512_xor_si512(x, _mm512_and_si512(_mm512_srai_epi16(x, 15), _mm512_set1_epi16(0x7fff))))
+/* A mask as bits in a general register, whatever the compiler thinks: GCC 12 widens a mask by spilling 32 bits of its
+ * register and reloading 64, half of them garbage. */
+#define IN_GENERAL(bits, move)                                                                                         \
+    INLINE uint32_t general_##bits(__mmask##bits mask)                                                                 \
+    {                                                                                                                  \
+        uint32_t general;                                                                                              \
+        __asm__(move " %1, %0" : "=r"(general) : "k"(mask));                                                           \
+        return general;                                                                                                \
+    }
+IN_GENERAL(8, "kmovb")
+IN_GENERAL(16, "kmovw")
+IN_GENERAL(32, "kmovd")
+
 #define NAN_NEVER(x) 0
 #define NAN_F16(x)                                                                                                     \
-    _mm512_cmpgt_epi16_mask(_mm512_and_si512(x, _mm512_set1_epi16(0x7fff)), _mm512_set1_epi16(LM_F16_INFINITY))
-#define NAN_F(x) _mm512_cmp_ps_mask(_mm512_castsi512_ps(x), _mm512_castsi512_ps(x), _CMP_UNORD_Q)
-#define NAN_D(x) _mm512_cmp_pd_mask(_mm512_castsi512_pd(x), _mm512_castsi512_pd(x), _CMP_UNORD_Q)
+    general_32(                                                                                                        \
+        _mm512_cmpgt_epi16_mask(_mm512_and_si512(x, _mm512_set1_epi16(0x7fff)), _mm512_set1_epi16(LM_F16_INFINITY)))
+#define NAN_F(x) general_16(_mm512_cmp_ps_mask(_mm512_castsi512_ps(x), _mm512_castsi512_ps(x), _CMP_UNORD_Q))
+#define NAN_D(x) general_8(_mm512_cmp_pd_mask(_mm512_castsi512_pd(x), _mm512_castsi512_pd(x), _CMP_UNORD_Q))
 
 /* What turns unsigned readings into signed ones of the same order; their nodes are turned already. */
 #define TURN_OF(bits)                                                                                                  \
