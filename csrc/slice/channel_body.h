@@ -32,8 +32,8 @@
         {                                                                                                              \
             lanes_##name lost = IS_NAN(name, *(const vec_##name *)(x + r * LANES(type)));                              \
             sum[r] = (sum[r] & (sums_##name) ~lost) | (sums_##name)(lost & (lane)c->invalid);                          \
-            *(bytes_##name *)(out + r * LANES(type)) = __builtin_convertvector(sum[r], bytes_##name);                  \
         }                                                                                                              \
+        NARROW(name, type, sum, out);                                                                                  \
     }                                                                                                                  \
                                                                                                                        \
     INLINE void runs_##name(const lm_channels *c, const type *x, size_t n, uint8_t out[], bool own)                    \

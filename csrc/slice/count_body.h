@@ -1,13 +1,13 @@
 /* The body of the counting kernels: which levels does each reading not reach, some vectors at a time.
  *
  * Included once for each instruction set, with LM_VECTOR (bytes of a register), LM_TARGET (function attribute) and
- * LM_SET (name of the struct of kernels) defined. Few levels are compared one after the other, and each takes away the
- * step between the two codes it parts, so labels cost one instruction more and no second pass. Many levels are
- * searched, several readings side by side.
+ * LM_SET (name of the struct of kernels) and LM_COUNTED (levels up to which a type is counted) defined. Few levels are
+ * compared one after the other, and each takes away the step between the two codes it parts, so labels cost one
+ * instruction more and no second pass. Many levels are searched, several readings side by side.
  */
 #include "lanes.h"
 
-enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 /* readings searched side by side */ };
+enum { ABREAST = 8 /* readings searched side by side */ };
 
 /* name; type of reading; lane: signed integer as wide; key: what is compared; kept: type of the slicer's levels; LIFT
  * and LIFT_ONE: reading to key; LEVEL: kept level to key; IS_NAN: vector to mask */
@@ -16,31 +16,36 @@ enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 
     INLINE void block_##name(const type *x, const key level[], const lane step[], size_t count, lane last,             \
                              lane invalid, bool plain, uint8_t out[])                                                  \
     {                                                                                                                  \
-        keys_##name v[sizeof(type)];                                                                                   \
+        /* four registers of readings and four of sums at a time: more would not stay in registers */                  \
+        enum { FEW = sizeof(type) < 4 ? sizeof(type) : 4 };                                                            \
         sums_##name sum[sizeof(type)];                                                                                 \
-        _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
+        _Pragma("GCC unroll 2") for (size_t g = 0; g < sizeof(type); g += FEW)                                         \
         {                                                                                                              \
-            v[r] = LIFT(name, *(const vec_##name *)(x + r * LANES(type)));                                             \
-            sum[r] = (sums_##name){0} + (u##lane)last;                                                                 \
-        }                                                                                                              \
-        for (size_t j = 0; j < count; j++)                                                                             \
-            _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                          \
+            keys_##name v[FEW];                                                                                        \
+            _Pragma("GCC unroll 4") for (size_t r = 0; r < FEW; r++)                                                   \
             {                                                                                                          \
-                lanes_##name below = v[r] < level[j];                                                                  \
-                sum[r] += (sums_##name)(plain ? below : below & step[j]);                                              \
+                v[r] = LIFT(name, *(const vec_##name *)(x + (g + r) * LANES(type)));                                   \
+                sum[g + r] = (sums_##name){0} + (u##lane)last;                                                         \
             }                                                                                                          \
-        _Pragma("GCC unroll 8") for (size_t r = 0; r < sizeof(type); r++)                                              \
-        {                                                                                                              \
-            lanes_##name lost = IS_NAN(name, *(const vec_##name *)(x + r * LANES(type)));                              \
-            sum[r] = (sum[r] & (sums_##name) ~lost) | (sums_##name)(lost & invalid);                                   \
-            *(bytes_##name *)(out + r * LANES(type)) = __builtin_convertvector(sum[r], bytes_##name);                  \
+            for (size_t j = 0; j < count; j++)                                                                         \
+                _Pragma("GCC unroll 4") for (size_t r = 0; r < FEW; r++)                                               \
+                {                                                                                                      \
+                    lanes_##name below = v[r] < level[j];                                                              \
+                    sum[g + r] += (sums_##name)(plain ? below : below & step[j]);                                      \
+                }                                                                                                      \
+            _Pragma("GCC unroll 4") for (size_t r = 0; r < FEW; r++)                                                   \
+            {                                                                                                          \
+                lanes_##name lost = IS_NAN(name, *(const vec_##name *)(x + (g + r) * LANES(type)));                    \
+                sum[g + r] = (sum[g + r] & (sums_##name) ~lost) | (sums_##name)(lost & invalid);                       \
+            }                                                                                                          \
         }                                                                                                              \
+        NARROW(name, type, sum, out);                                                                                  \
     }                                                                                                                  \
                                                                                                                        \
     INLINE void count_##name(const lm_slicer *s, const type *x, size_t n, uint8_t out[], bool plain)                   \
     {                                                                                                                  \
-        key level[COUNTED];                                                                                            \
-        lane step[COUNTED];                                                                                            \
+        key level[LM_MAX_LEVELS];                                                                                      \
+        lane step[LM_MAX_LEVELS];                                                                                      \
         const kept *stored = (const void *)s->level;                                                                   \
         for (size_t j = 0; j < s->count; j++) {                                                                        \
             level[j] = LEVEL(name, stored[j]);                                                                         \
@@ -82,10 +87,10 @@ enum { COUNTED = 15 /* levels; beyond them the search is faster */, ABREAST = 8 
                                                                                                                        \
     LM_TARGET static void decide_##name(const lm_slicer *s, const void *x, size_t n, uint8_t out[])                    \
     {                                                                                                                  \
-        if (s->count > COUNTED && sizeof(type) == 1)                                                                   \
+        if (s->count > LM_COUNTED(type) && sizeof(type) == 1)                                                          \
             for (size_t i = 0; i < n; i++)                                                                             \
                 out[i] = s->table[((const uint8_t *)x)[i]];                                                            \
-        else if (s->count > COUNTED)                                                                                   \
+        else if (s->count > LM_COUNTED(type))                                                                          \
             search_##name(s, x, n, out);                                                                               \
         else if (s->plain)                                                                                             \
             count_##name(s, x, n, out, true);                                                                          \

@@ -50,3 +50,12 @@ typedef int64_t lane_u64;
 typedef uint64_t ulane_u64;
 
 #define F16_LIFT_ONE(name, x) lm_f16_key(x)
+
+/* Sums of sizeof(type) registers, each lane from 0 to 255, to LM_VECTOR bytes. */
+#ifndef NARROW
+#define NARROW(name, type, sum, out)                                                                                   \
+    do {                                                                                                               \
+        _Pragma("GCC unroll 8") for (size_t narrow_r = 0; narrow_r < sizeof(type); narrow_r++) *                       \
+            (bytes_##name *)((out) + narrow_r * LANES(type)) = __builtin_convertvector((sum)[narrow_r], bytes_##name); \
+    } while (0)
+#endif
