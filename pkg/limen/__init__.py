@@ -2,6 +2,7 @@
 
 from ._core import __version__
 from .slicing import build_info, decide
+from .streaming import stream, tally_stream
 from .tallies import Tally
 
-__all__ = ["Tally", "__version__", "build_info", "decide"]
+__all__ = ["Tally", "__version__", "build_info", "decide", "stream", "tally_stream"]

@@ -33,7 +33,8 @@ def stream(rule: Any, source: Any, sink: Any = None, *, chunk: int = CHUNK, prog
     Parameters
     ----------
     rule : Rule
-        With or without hysteresis, whose state runs on from chunk to chunk.
+        With or without hysteresis (`width`), whose state runs on from chunk to chunk; anything with `levels`,
+        `decisions`, `names` and `invalid` will do.
     source : array, path or iterable
         A memmap, h5py dataset, zarr array, or anything else with a shape that can be sliced along its first axis; the
         path of a ``.npy`` file, or of a raw file together with `dtype`; or an iterable of chunks.
@@ -67,8 +68,9 @@ def stream(rule: Any, source: Any, sink: Any = None, *, chunk: int = CHUNK, prog
     Examples
     --------
     >>> import limen as lm, numpy as np
+    >>> from types import SimpleNamespace
     >>> np.arange(6, dtype="int16").tofile("recording.raw")
-    >>> rule = lm.rule([2.5], ["low", "high"])
+    >>> rule = SimpleNamespace(levels=[2.5], decisions=[0, 1], names=["low", "high"], invalid=255)
     >>> lm.stream(rule, "recording.raw", "codes.npy", dtype="int16")
     'codes.npy'
     >>> np.load("codes.npy").tolist()
@@ -119,7 +121,8 @@ def tally_stream(rule: Any, source: Any, truth: Any = None, *, states: Any = Non
     Examples
     --------
     >>> import limen as lm, numpy as np
-    >>> rule = lm.rule([2.5], ["low", "high"])
+    >>> from types import SimpleNamespace
+    >>> rule = SimpleNamespace(levels=[2.5], decisions=[0, 1], names=["low", "high"], invalid=255)
     >>> lm.tally_stream(rule, ([1.0, 2.0], [3.0, np.nan])).counts.tolist()
     [2, 1]
     """
