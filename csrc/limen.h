@@ -200,7 +200,7 @@ typedef struct {
     uint32_t depth;                      /* of the search: 2^depth > count */
     bool plain;                          /* codes[k] == k: no labels to apply */
     uint8_t invalid;                     /* code of NaN */
-    uint8_t code[256];                   /* of interval k; entries past count repeat the last */
+    uint8_t code[256];                   /* of interval k; past count the last repeats, up to 2^depth */
     uint8_t found[256];                  /* the same, by the bits of the search path, first comparison lowest */
     uint8_t table[256];                  /* 8-bit readings: code of each byte */
     _Alignas(64) uint8_t level[256 * 8]; /* of the reading's type, ascending, padded to 2^depth - 1 with its largest */

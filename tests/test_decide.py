@@ -1,6 +1,7 @@
 """lm.decide against the definition in exact arithmetic, for every type, layout and kind of array."""
 
 import os
+import signal
 import subprocess
 import sys
 import tracemalloc
@@ -12,7 +13,7 @@ import pytest
 
 import limen as lm
 from limen import _core
-from limen._arrays import decide_any
+from limen._arrays import decide_any, pack_any, tally_any
 
 LEVELS = [0.385, 1.7, 6.04]
 CODES = [3, 0, 2, 1]
@@ -257,3 +258,67 @@ def test_the_ufunc_pickles():
     import pickle
 
     assert pickle.loads(pickle.dumps(_core.decide)) is _core.decide
+
+
+def test_a_float32_reading_decides_as_its_own_value():
+    """float32(0.2) lies above 0.2 and float32(0.3) above 0.3, float32(0.7) below 0.7: the type of the levels must not
+    change that (NumPy's #23218)."""
+    for level in (0.2, 0.3, 0.7, 0.1, 1 / 3):
+        x = np.float32([level])
+        assert lm.decide(x, [level], [0, 1])[0] == (float(x[0]) >= level)
+        assert lm.decide(x, np.float32([level]), [0, 1])[0] == 1  # these levels are the rounded ones
+
+
+@pytest.mark.parametrize("dtype", ["int8", "int16", "float16", "float32"])
+def test_python_numbers_as_levels_cast_no_reading(dtype):
+    """NumPy's #29719, #13579, #5370: a Python int beside a narrow array cost a cast of the whole array."""
+    x = np.ones(1_000_000, dtype)
+    out = np.empty(x.shape, np.uint8)
+    lm.decide(x, [1, 2], [0, 1, 2], out=out)
+    tracemalloc.start()
+    lm.decide(x, [1, 2], [0, 1, 2], out=out)
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    assert peak < 20_000
+
+
+def test_an_interrupt_stops_a_long_call():
+    """A tally of 2**40 readings that are one number in memory would take minutes; the handler of a signal ends it."""
+    class Stop(Exception):
+        pass
+
+    def stop(number, frame):
+        raise Stop
+
+    before = signal.signal(signal.SIGALRM, stop)
+    try:
+        for threads in (1, 2):
+            signal.setitimer(signal.ITIMER_REAL, 0.05)
+            with pytest.raises(Stop):
+                tally_any(np.broadcast_to(np.float32(1), 2**40), LEVELS, CODES, threads=threads)
+    finally:
+        signal.setitimer(signal.ITIMER_REAL, 0)
+        signal.signal(signal.SIGALRM, before)
+
+
+def test_a_fork_after_threads_can_use_threads():
+    code = """
+import os, numpy as np
+from limen._arrays import decide_any, pack_any, tally_any
+x = np.zeros(2_000_000, np.float32)
+decide_any(x, [0.5], [0, 1], threads=2)
+child = os.fork()
+if child == 0:
+    os._exit(int(decide_any(x, [0.5], [0, 1], threads=2).any()))
+assert os.waitpid(child, 0)[1] == 0
+"""
+    subprocess.run([sys.executable, "-W", "ignore", "-c", code], check=True, timeout=60)
+
+
+@pytest.mark.slow
+def test_more_readings_than_32_bits_count():
+    n = 2**31 + 12_345
+    x = np.broadcast_to(np.uint8(7), n)
+    counts, invalid = tally_any(x, [5.0], [0, 1])
+    assert counts.tolist() == [0, n] and invalid == 0
+    assert pack_any(np.broadcast_to(np.uint8(7), 2**31 + 16), [5.0], [0, 1])[-2:].tolist() == [255, 255]

@@ -345,10 +345,11 @@ TARGET static bool planes_of(const uint8_t byte[], size_t n, uint32_t limit, int
     }
 }
 
-/* Where the planes spell a value, among the readings that are there; a word for each 64. */
-INLINE void spell(uint32_t value, int planes, uint64_t plane[][WORDS], const uint64_t there[WORDS], size_t words,
+/* Where the planes spell a value, among the readings that are there, a word for each 64; whether they do anywhere. */
+INLINE bool spell(uint32_t value, int planes, uint64_t plane[][WORDS], const uint64_t there[WORDS], size_t words,
                   uint64_t where[WORDS])
 {
+    __m512i any = _mm512_setzero_si512();
     for (size_t w = 0; w < words; w += 8) {
         __m512i here = _mm512_load_si512(there + w);
         for (int p = 0; p < planes; p++) {
@@ -356,7 +357,9 @@ INLINE void spell(uint32_t value, int planes, uint64_t plane[][WORDS], const uin
             here = value >> p & 1 ? _mm512_and_si512(bits, here) : _mm512_andnot_si512(bits, here);
         }
         _mm512_store_si512(where + w, here);
+        any = _mm512_or_si512(any, here);
     }
+    return _mm512_test_epi64_mask(any, any) != 0;
 }
 
 /* A cell of the tally is the population of two masks: readings of one decision, readings of one state. All planes are
@@ -380,7 +383,8 @@ TARGET static bool count(const uint8_t code[], const uint8_t truth[], size_t n, 
     for (uint32_t s = 0; s < states; s++)
         spell(s, truth_planes, truth_plane, there, words, true_in[s]);
     for (uint32_t d = 0; d < decisions; d++) {
-        spell(d, code_planes, code_plane, there, words, decided);
+        if (!spell(d, code_planes, code_plane, there, words, decided))
+            continue; /* NaN, mostly */
         for (uint32_t s = 0; s < states; s++) {
             __m512i sum = _mm512_load_si512(cell[d * states + s]);
             for (size_t w = 0; w < words; w += 8)

@@ -183,7 +183,7 @@ lm_status lm_slicer_init(lm_slicer *out, lm_reading reading, const double levels
         largest_of[reading](out->level + i * size);
 
     out->plain = invalid == 255;
-    for (uint32_t k = 0; k < 256; k++) {
+    for (uint32_t k = 0; k < 1u << out->depth; k++) {
         out->code[k] = codes[k < reached ? k : reached];
         out->plain = out->plain && (k > reached || out->code[k] == k);
     }
