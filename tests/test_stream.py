@@ -111,7 +111,7 @@ def test_h5py_and_zarr(tmp_path):
 
 
 def test_zarr(tmp_path):
-    zarr = pytest.importorskip("zarr")
+    zarr = pytest.importorskip("zarr", minversion="3.0")
     source = zarr.create_array(str(tmp_path / "x.zarr"), shape=X.shape, dtype="f4", chunks=(512,))
     source[:] = X
     sink = zarr.create_array(str(tmp_path / "c.zarr"), shape=X.shape, dtype="u1", chunks=(512,))
