@@ -181,9 +181,9 @@ LM_API void lm_log_risk(const double log_transition[], const double priors[], si
  * as its bits.
  */
 #define LM_READINGS(X)                                                                                                 \
-    X(I8, i8, int8_t)                                                                                                  \
-    X(U8, u8, uint8_t) X(I16, i16, int16_t) X(U16, u16, uint16_t) X(I32, i32, int32_t) X(U32, u32, uint32_t)           \
-        X(I64, i64, int64_t) X(U64, u64, uint64_t) X(F16, f16, uint16_t) X(F32, f32, float) X(F64, f64, double)
+    X(I8, i8, int8_t) X(U8, u8, uint8_t) X(I16, i16, int16_t) X(U16, u16, uint16_t) X(I32, i32, int32_t)               \
+    X(U32, u32, uint32_t) X(I64, i64, int64_t) X(U64, u64, uint64_t) X(F16, f16, uint16_t) X(F32, f32, float)          \
+    X(F64, f64, double)
 
 #define LM_READING_CODE(code, name, type) LM_##code,
 typedef enum { LM_READINGS(LM_READING_CODE) LM_READING_END } lm_reading;

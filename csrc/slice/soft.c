@@ -191,14 +191,16 @@ static lm_status block_f64(const lm_soft *soft, const double x[], size_t n, doub
 #define WIDEN_BOTH(code, name, type)                                                                                   \
     WIDEN(name, type, float)                                                                                           \
     WIDEN(name, type, double)
-#define WIDEN_INTEGERS(X)                                                                                              \
-    X(I8, i8, int8_t)                                                                                                  \
-    X(U8, u8, uint8_t)                                                                                                 \
-    X(I16, i16, int16_t)                                                                                               \
-    X(U16, u16, uint16_t)                                                                                              \
-    X(I32, i32, int32_t)                                                                                               \
-    X(U32, u32, uint32_t) X(I64, i64, int64_t) X(U64, u64, uint64_t) X(F32, f32, float) X(F64, f64, double)
-WIDEN_INTEGERS(WIDEN_BOTH)
+WIDEN_BOTH(I8, i8, int8_t)
+WIDEN_BOTH(U8, u8, uint8_t)
+WIDEN_BOTH(I16, i16, int16_t)
+WIDEN_BOTH(U16, u16, uint16_t)
+WIDEN_BOTH(I32, i32, int32_t)
+WIDEN_BOTH(U32, u32, uint32_t)
+WIDEN_BOTH(I64, i64, int64_t)
+WIDEN_BOTH(U64, u64, uint64_t)
+WIDEN_BOTH(F32, f32, float)
+WIDEN_BOTH(F64, f64, double)
 
 /* binary16: the exponent of its bits, moved to binary32, is off by a power of two that a product restores, denormals
  * included; infinity and NaN keep their all-ones exponent. */
