@@ -1,11 +1,24 @@
 /* limen._core.Soft: a log likelihood ratio or a posterior by its compiled table, over arrays of any layout. */
 #include "slice.h"
 
-#define LM_DENSITIES "density.h"
-#if __has_include(LM_DENSITIES) /* a build without densities has no soft outputs */
-#include LM_DENSITIES
-
 #include "../numeric/memory.h"
+
+#define LM_DENSITIES "density.h"
+#if __has_include(LM_DENSITIES)
+#include LM_DENSITIES
+#else /* a module without density objects has none to be given here */
+static const lm_density *lm_density_of(PyObject *object, const char *argument)
+{
+    PyErr_Format(PyExc_TypeError, "%s is %R; expected a density", argument, object);
+    return NULL;
+}
+
+static bool lm_density_calls_back(const lm_density *density)
+{
+    (void)density;
+    return false;
+}
+#endif
 
 typedef struct {
     PyObject_HEAD lm_log_ratio *ratio;
@@ -217,10 +230,3 @@ int lm_bind_soft(PyObject *module)
     Py_XDECREF(type);
     return failed ? -1 : 0;
 }
-#else
-int lm_bind_soft(PyObject *module)
-{
-    (void)module;
-    return 0;
-}
-#endif
