@@ -286,18 +286,24 @@ lm_status lm_soft_values(const lm_soft *soft, lm_reading reading, const void *x,
                     ((int8_t *)to)[(ptrdiff_t)i * out_stride] = quantised((double)result[i], 1 / step);
         } else {
             const bool here = reading == LM_F64 && apart == sizeof(double) && (uintptr_t)from % sizeof(double) == 0;
+            const bool there =
+                output == LM_SOFT_F64 && out_stride == sizeof(double) && (uintptr_t)to % sizeof(double) == 0;
             if (!here)
                 doubles_of[reading](from, apart, now, readings);
-            LM_TRY(block_f64(soft, here ? (const void *)from : readings, now, values));
-            for (size_t i = 0; i < now; i++) {
-                char *at = to + (ptrdiff_t)i * out_stride;
-                if (output == LM_SOFT_F64)
-                    memcpy(at, &values[i], sizeof(double));
-                else if (output == LM_SOFT_F32)
-                    memcpy(at, &(float){(float)values[i]}, sizeof(float));
-                else
-                    *(int8_t *)at = quantised(values[i], 1 / step);
-            }
+            LM_TRY(block_f64(soft, here ? (const void *)from : readings, now, there ? (void *)to : values));
+            if (output == LM_SOFT_F32 && out_stride == sizeof(float))
+                for (size_t i = 0; i < now; i++)
+                    memcpy(to + i * sizeof(float), &(float){(float)values[i]}, sizeof(float));
+            else
+                for (size_t i = 0; !there && i < now; i++) {
+                    char *at = to + (ptrdiff_t)i * out_stride;
+                    if (output == LM_SOFT_F64)
+                        memcpy(at, &values[i], sizeof(double));
+                    else if (output == LM_SOFT_F32)
+                        memcpy(at, &(float){(float)values[i]}, sizeof(float));
+                    else
+                        *(int8_t *)at = quantised(values[i], 1 / step);
+                }
         }
         done += now;
     }
