@@ -359,4 +359,9 @@ typedef struct {
 LM_API LM_MUST_USE lm_status lm_pareto_fit(const double readings[], size_t n, double threshold, lm_pareto_tail *out,
                                            lm_fault *fault);
 
+/* Exact two-sided bounds of a rate from errors in independent trials (Clopper and Pearson): whole numbers from 0 to
+ * trials, and trials from 1 to 2^53; each side leaves out half of 1 - confidence. *out is set only on success. */
+LM_API LM_MUST_USE lm_status lm_error_bounds(double errors, double trials, double confidence, lm_range *out,
+                                             lm_fault *fault);
+
 #endif

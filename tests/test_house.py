@@ -249,6 +249,8 @@ def test_docstring_and_its_example(name, value, example, tmp_path, monkeypatch):
     runner = doctest.DocTestRunner(optionflags=doctest.ELLIPSIS | doctest.NORMALIZE_WHITESPACE)
     said = []
     runner.run(examples, out=said.append)
+    if "matplotlib.pyplot" in sys.modules:
+        sys.modules["matplotlib.pyplot"].close("all")
     assert runner.failures == 0, "".join(said)
 
 

@@ -12,9 +12,6 @@ import pytest
 import limen as lm
 from limen.soft import Soft
 
-if not hasattr(lm, "mixture"):
-    pytest.skip("this module has no densities yet", allow_module_level=True)
-
 gaussian = lm.gaussian
 A = lm.mixture([0.9, 0.1], [gaussian(0, 1), gaussian(0.5, 4)])
 B = lm.mixture([0.8, 0.2], [gaussian(3, 0.7), gaussian(2.5, 3)])

@@ -1,8 +1,37 @@
 """Decision levels for scalar readings: found exactly, assessed in both tails, applied at the speed of memory."""
 
+from . import plot
 from ._core import __version__
+from .densities import Density, density, from_readings, gaussian, mixture
+from .evidence import error_bounds
+from .reports import report
+from .rules import Assessment, Rule, bayes, load, rule
 from .slicing import build_info, decide
+from .soft import Soft
+from .states import States
 from .streaming import stream, tally_stream
 from .tallies import Tally
 
-__all__ = ["Tally", "__version__", "build_info", "decide", "stream", "tally_stream"]
+__all__ = [
+    "Assessment",
+    "Density",
+    "Rule",
+    "Soft",
+    "States",
+    "Tally",
+    "__version__",
+    "bayes",
+    "build_info",
+    "decide",
+    "density",
+    "error_bounds",
+    "from_readings",
+    "gaussian",
+    "load",
+    "mixture",
+    "plot",
+    "report",
+    "rule",
+    "stream",
+    "tally_stream",
+]

@@ -45,6 +45,12 @@ class Soft:
     Notes
     -----
     NaN readings give NaN, and so do readings that no state can give. The values are the same bits on every processor.
+
+    Examples
+    --------
+    >>> states = lm.States({"one": lm.gaussian(1.0, 0.5), "zero": lm.gaussian(0.0, 0.5)})
+    >>> states.soft("one", "zero", dtype="float64")([0.75, 1.0]).round(5).tolist()
+    [1.0, 2.0]
     """
 
     error_bound = 1e-6

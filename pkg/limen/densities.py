@@ -1,0 +1,224 @@
+"""Densities: the law of a reading in one state."""
+
+from __future__ import annotations
+
+import operator
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import numpy as np
+
+from . import _core
+
+__all__ = ["Density", "density", "from_readings", "gaussian", "mixture"]
+
+_FORMAT, _VERSION = "limen density", 1
+
+
+class Density(_core.Density):
+    """The law of a reading in one state; immutable, hashable, picklable, equal where made alike.
+
+    Made by `gaussian`, `mixture`, `from_readings` and the other constructors. ``logpdf``, ``pdf``, ``cdf``, ``sf``,
+    ``logcdf`` and ``logsf`` take readings, ``ppf`` and ``isf`` probabilities: scalars or arrays of any shape, and
+    ``out=``. ``mean``, ``var``, ``sd``, ``support`` and ``discrete`` are attributes. ``d + 3.0`` is shifted and
+    ``2.5 * d`` is scaled.
+
+    Examples
+    --------
+    >>> d = 2.0 * lm.gaussian(0.5, 0.1) + 1.0
+    >>> d.mean, d.sd
+    (2.0, 0.2)
+    >>> d.logsf(10.0)
+    -804.608...
+    """
+
+    __slots__ = ()
+
+    def __add__(self, shift: Any) -> Density:
+        return self._moved(shift, 1.0) if isinstance(shift, (int, float, np.number)) else NotImplemented
+
+    __radd__ = __add__
+
+    def __sub__(self, shift: Any) -> Density:
+        return self._moved(-shift, 1.0) if isinstance(shift, (int, float, np.number)) else NotImplemented
+
+    def __mul__(self, scale: Any) -> Density:
+        return self._moved(0.0, scale) if isinstance(scale, (int, float, np.number)) else NotImplemented
+
+    __rmul__ = __mul__
+
+    def __neg__(self) -> Density:
+        return self._moved(0.0, -1.0)
+
+    def to_dict(self) -> dict[str, Any]:
+        """Plain Python, for JSON; `limen.density` makes it a density again."""
+        return {"format": _FORMAT, "version": _VERSION, **_plain(self._recipe)}
+
+    def __reduce__(self) -> tuple:
+        return _from_recipe, (self._recipe,)
+
+    def __repr__(self) -> str:
+        kind, *rest = self._recipe
+        if kind == "moved":
+            part, shift, scale = rest
+            text = repr(part) if scale == 1 else f"{scale!r} * {part!r}"
+            return text if shift == 0 else f"{text} + {shift!r}"
+        if kind == "mixture":
+            weights, parts = rest
+            return f"mixture([{', '.join(map(repr, weights))}], [{', '.join(map(repr, parts))}])"
+        if kind == "from_readings":
+            return f"<from_readings: {rest[5][0]:.0f} readings, {len(rest[0])} knots>"
+        return f"{kind}({', '.join(map(repr, rest[0]))})"
+
+
+def gaussian(mean: float, sd: float) -> Density:
+    """The normal law.
+
+    Parameters
+    ----------
+    mean : float
+    sd : float
+        Standard deviation, above 0.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Examples
+    --------
+    >>> lm.gaussian(1.3, 0.07).sf(1.3)
+    0.5
+    """
+    return Density._make("gaussian", mean, sd)
+
+
+def mixture(weights: Sequence[float], densities: Sequence[Density]) -> Density:
+    """One of several laws, drawn anew for each reading.
+
+    Parameters
+    ----------
+    weights : sequence of float
+        How often each; at least 0, with sum 1 within 1e-9.
+    densities : sequence of Density
+        As many, all of readings or all of counts.
+
+    Raises
+    ------
+    ValueError
+        Weights that do not fit.
+    TypeError
+        Something that is no density.
+
+    Examples
+    --------
+    >>> lm.mixture([0.9, 0.1], [lm.gaussian(0.0, 1.0), lm.gaussian(0.0, 10.0)]).support
+    (-inf, inf)
+    """
+    return Density._mix(tuple(float(w) for w in weights), tuple(densities))
+
+
+def from_readings(readings: Any, tails: str = "pareto") -> Density:
+    """The density of recorded readings: a smooth body, and generalized Pareto tails.
+
+    Parameters
+    ----------
+    readings : array_like of float, shape (n,)
+        Finite, at least 20, of which 3 are distinct. Readings on a lattice (clock ticks, converter codes) count as
+        spread evenly over their cells.
+    tails : "pareto"
+
+    Returns
+    -------
+    Density
+        Its body is a log-spline whose knots the Bayes information criterion chooses (Stone, Hansen, Kooperberg and
+        Truong, Ann. Statist. 25 (1997) 1371; Schwarz, Ann. Statist. 6 (1978) 461); so are the thresholds of its tails.
+        Far beyond the last reading it is an extrapolation.
+
+    Raises
+    ------
+    ValueError
+        Too few readings, or one that is not finite.
+
+    Examples
+    --------
+    >>> readings = lm.gaussian(20.0, 3.0).ppf((np.arange(5000) + 0.5) / 5000)
+    >>> d = lm.from_readings(readings)
+    >>> print(f"{d.mean:.1f} {d.sd:.1f}")
+    20.0 3.0
+    """
+    if tails != "pareto":
+        raise ValueError(f"tails is {tails!r}; expected 'pareto'")
+    array = np.asarray(readings)
+    if array.ndim != 1 or array.dtype.kind not in "iuf":
+        raise ValueError(f"readings has shape {array.shape} and type {array.dtype}; expected a list of real numbers")
+    return _core.from_readings(Density, array.astype(np.float64))
+
+
+def density(description: Mapping[str, Any]) -> Density:
+    """The density that `Density.to_dict` described.
+
+    Parameters
+    ----------
+    description : dict
+
+    Raises
+    ------
+    ValueError
+        Another format, a newer version, or an entry that is missing or does not fit.
+
+    Examples
+    --------
+    >>> d = lm.gaussian(0.8, 0.05)
+    >>> lm.density(d.to_dict()) == d
+    True
+    """
+    if not isinstance(description, Mapping) or description.get("format") != _FORMAT:
+        raise ValueError(f"format is not {_FORMAT!r}; expected what Density.to_dict gives")
+    if description.get("version") != _VERSION:
+        raise ValueError(f"version is {description.get('version')!r}; expected {_VERSION}")
+    try:
+        return _from_plain(description)
+    except (KeyError, TypeError, AttributeError) as bad:
+        raise ValueError(f"a density of family {description.get('family')!r} cannot be read: {bad!r}") from bad
+
+
+def _plain(recipe: tuple) -> dict[str, Any]:
+    """A recipe as a dict of plain lists, with the names of the parameters."""
+    kind, *rest = recipe
+    if kind == "moved":
+        return {"family": kind, "density": _plain(rest[0]._recipe), "shift": rest[1], "scale": rest[2]}
+    if kind == "mixture":
+        return {"family": kind, "weights": list(rest[0]), "densities": [_plain(part._recipe) for part in rest[1]]}
+    if kind == "from_readings":
+        return {"family": kind, **dict(zip(_SPLINE, rest))}
+    return {"family": kind, **dict(zip(_core._families()[kind], rest[0]))}
+
+
+_SPLINE = ("knots", "log_densities", "slopes", "tail_scales", "tail_shapes", "about")
+
+
+def _from_plain(plain: Mapping[str, Any]) -> Density:
+    kind = plain["family"]
+    if kind == "moved":
+        return _from_plain(plain["density"])._moved(plain["shift"], plain["scale"])
+    if kind == "mixture":
+        return mixture(plain["weights"], [_from_plain(part) for part in plain["densities"]])
+    if kind == "from_readings":
+        return _from_recipe((kind, *(_tuples(plain[name]) for name in _SPLINE)))
+    return Density._make(kind, *operator.itemgetter(*_core._families()[kind])(plain))
+
+
+def _tuples(value: Any) -> Any:
+    return tuple(map(_tuples, value)) if isinstance(value, (list, tuple)) else value
+
+
+def _from_recipe(recipe: tuple) -> Density:
+    kind, *rest = recipe
+    if kind == "moved":
+        return rest[0]._moved(rest[1], rest[2])
+    if kind == "mixture":
+        return Density._mix(*rest)
+    if kind == "from_readings":
+        return _core.spline(Density, *rest)
+    return Density._make(kind, *rest[0])
