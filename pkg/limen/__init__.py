@@ -2,7 +2,7 @@
 
 from . import plot
 from ._core import __version__
-from .densities import Density, density, from_readings, gaussian, mixture
+from .densities import Density, density, exponential, from_readings, gaussian, laplace, mixture, uniform
 from .evidence import error_bounds
 from .reports import report
 from .rules import Assessment, Rule, bayes, load, rule
@@ -25,8 +25,10 @@ __all__ = [
     "decide",
     "density",
     "error_bounds",
+    "exponential",
     "from_readings",
     "gaussian",
+    "laplace",
     "load",
     "mixture",
     "plot",
@@ -34,4 +36,5 @@ __all__ = [
     "rule",
     "stream",
     "tally_stream",
+    "uniform",
 ]

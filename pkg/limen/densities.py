@@ -10,7 +10,7 @@ import numpy as np
 
 from . import _core
 
-__all__ = ["Density", "density", "from_readings", "gaussian", "mixture"]
+__all__ = ["Density", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture", "uniform"]
 
 _FORMAT, _VERSION = "limen density", 1
 
@@ -91,6 +91,73 @@ def gaussian(mean: float, sd: float) -> Density:
     0.5
     """
     return Density._make("gaussian", mean, sd)
+
+
+def laplace(loc: float, scale: float) -> Density:
+    """The Laplace law, ``exp(-abs(x - loc) / scale) / (2 scale)``.
+
+    Parameters
+    ----------
+    loc : float
+        Mean, median and mode.
+    scale : float
+        Mean distance from it, above 0.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Examples
+    --------
+    >>> lm.laplace(2.0, 0.5).var
+    0.5
+    """
+    return Density._make("laplace", loc, scale)
+
+
+def uniform(low: float, high: float) -> Density:
+    """All readings between two alike.
+
+    Parameters
+    ----------
+    low, high : float
+        ``low < high``; both belong to the support.
+
+    Raises
+    ------
+    ValueError
+        Bounds out of order.
+
+    Examples
+    --------
+    >>> lm.uniform(1.0, 3.0).cdf([0.0, 1.5, 3.0]).tolist()
+    [0.0, 0.25, 1.0]
+    """
+    return Density._make("uniform", low, high)
+
+
+def exponential(scale: float, low: float = 0.0) -> Density:
+    """The exponential law from `low` up, ``exp(-(x - low) / scale) / scale``.
+
+    Parameters
+    ----------
+    scale : float
+        Mean distance from `low`, above 0.
+    low : float
+        Where it starts.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Examples
+    --------
+    >>> lm.exponential(2.0).logsf(20.0)
+    -10.0
+    """
+    return Density._make("exponential", scale, low)
 
 
 def mixture(weights: Sequence[float], densities: Sequence[Density]) -> Density:

@@ -1,0 +1,80 @@
+"""Each family against its formula at 50 digits; one row a family."""
+
+import mpmath
+import numpy as np
+import pytest
+
+import limen as lm
+
+def laplace(x, loc, scale):
+    z = (x - loc) / scale
+    below = mpmath.exp(z) / 2 if z <= 0 else 1 - mpmath.exp(-z) / 2
+    above = mpmath.exp(-z) / 2 if z >= 0 else 1 - mpmath.exp(z) / 2
+    return mpmath.exp(-abs(z)) / (2 * scale), below, above
+
+
+def uniform(x, low, high):
+    inside = low <= x <= high
+    share = min(max((x - low) / (high - low), mpmath.mpf(0)), mpmath.mpf(1))
+    return (1 / (high - low) if inside else mpmath.mpf(0)), share, 1 - share
+
+
+def exponential(x, scale, low):
+    z = (x - low) / scale
+    if z < 0:
+        return mpmath.mpf(0), mpmath.mpf(0), mpmath.mpf(1)
+    return mpmath.exp(-z) / scale, -mpmath.expm1(-z), mpmath.exp(-z)
+
+
+def gaussian(x, mean, sd):
+    z = (x - mean) / sd
+    return mpmath.npdf(x, mean, sd), mpmath.erfc(-z / mpmath.sqrt(2)) / 2, mpmath.erfc(z / mpmath.sqrt(2)) / 2
+
+
+ROWS = [
+    (lm.gaussian, gaussian, (0.385, 1.7), [-60.0, -3.1, 0.1, 0.385, 2.6, 61.3]),
+    (lm.laplace, laplace, (0.385, 1.7), [-1900.0, -3.1, 0.3, 0.385, 0.4, 2.6, 1900.5]),
+    (lm.uniform, uniform, (-1.25, 3.5), [-1.3, -1.25, -1.0, 0.1, 3.4375, 3.5, 3.7]),
+    (lm.exponential, exponential, (1.7, -0.25), [-0.3, -0.25, -0.2499, 0.7, 3.3, 1900.0]),
+]
+
+
+@pytest.mark.parametrize(("make", "formula", "parameters", "readings"), ROWS, ids=[row[0].__name__ for row in ROWS])
+def test_logarithms_of_density_and_both_tails(make, formula, parameters, readings):
+    """Relative 1e-13, or 1e-15 absolute where the logarithm is near 0: the numerical policy of the design."""
+    d = make(*parameters)
+    with mpmath.workdps(1200):     # so that 1 less a tail of exp(-1200) is not 1
+        for x in readings:
+            values = formula(mpmath.mpf(x), *map(mpmath.mpf, parameters))
+            for name, value in zip(("logpdf", "logcdf", "logsf"), values):
+                wanted = float(mpmath.log(value)) if value > 0 else -np.inf
+                assert getattr(d, name)(x) == pytest.approx(wanted, rel=1e-13, abs=1e-15), (name, x)
+
+
+@pytest.mark.parametrize(("make", "parameters"), [row[::2] for row in ROWS], ids=[row[0].__name__ for row in ROWS])
+def test_quantiles_from_both_tails_come_back(make, parameters):
+    """To 1e-12 of the logarithm: a quantile is a double, and a reading's rounding moves its tail by some 1e-15 times
+    the slope, at most 60 here."""
+    d = make(*parameters)
+    for q in (1e-300, 1e-20, 0.013, 0.5, 0.87):     # at a finite edge, doubles cannot reach the small ones
+        if np.isinf(d.support[1]):
+            assert d.logsf(d.isf(q)) == pytest.approx(np.log(q), rel=1e-12)
+        if np.isinf(d.support[0]):
+            assert d.logcdf(d.ppf(q)) == pytest.approx(np.log(q), rel=1e-12)
+
+
+CROSSINGS = [
+    # two Laplace laws of one scale cross once, midway; of two scales twice, on both sides of the narrow one
+    (lm.laplace(0.0, 1.0), lm.laplace(3.0, 1.0), [1.5]),
+    (lm.laplace(0.0, 1.0), lm.laplace(0.0, 4.0), [-np.log(4) / 0.75, np.log(4) / 0.75]),
+    (lm.exponential(1.0), lm.exponential(3.0), [np.log(3) / (1 - 1 / 3)]),
+    (lm.uniform(0.0, 1.0), lm.uniform(0.75, 2.75), [np.nextafter(1.0, 2.0)]),
+]
+
+
+@pytest.mark.parametrize(("a", "b", "levels"), CROSSINGS, ids=lambda value: repr(value))
+def test_levels_in_closed_form(a, b, levels):
+    """Equal priors; 1e-14 relative. Beyond the edge of the higher uniform law the other takes over."""
+    rule = lm.bayes(lm.States({"a": a, "b": b}))
+    assert rule.levels.tolist() == pytest.approx(levels, rel=1e-14)
+    assert rule.search.startswith("exhaustive")
