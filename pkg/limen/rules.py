@@ -53,9 +53,17 @@ class Rule:
         if decisions.size != levels.size + 1:
             raise ValueError(f"decisions holds {decisions.size} entries; expected {levels.size + 1}, one more than "
                              "levels")
-        for name, value in (("levels", levels), ("decisions", decisions), ("names", tuple(map(str, names))),
-                            ("search", str(search)), ("width", width)):
-            object.__setattr__(self, name, value)
+        self._set(levels, decisions, tuple(map(str, names)), str(search), width)
+
+    def _set(self, levels: np.ndarray, decisions: np.ndarray, names: tuple, search: str, width: float | None) -> Rule:
+        """Take over what is known to fit; a design costs less than the checks would."""
+        put = object.__setattr__
+        put(self, "levels", levels)
+        put(self, "decisions", decisions)
+        put(self, "names", names)
+        put(self, "search", search)
+        put(self, "width", width)
+        return self
 
     def __setattr__(self, name: str, value: Any) -> None:
         raise AttributeError(f"rules are immutable: {name} cannot be set")
@@ -251,8 +259,10 @@ def bayes(states: States, costs: Any = None, decisions: Sequence[str] | None = N
     else:
         names = states.names if decisions is None else tuple(map(str, decisions))
         matrix = _as_costs(costs, states.names, names)
+    if len(names) >= _INVALID:
+        raise ValueError(f"decisions has {len(names)} names; expected at most {_INVALID - 1}")
     levels, chosen, search = _core.bayes(states.densities, states.priors, matrix)
-    return Rule(levels, chosen, names, _in_words(*search))
+    return Rule.__new__(Rule)._set(levels, chosen, names, _in_words(*search), None)
 
 
 def rule(levels: Any, decisions: Any, names: Sequence[str]) -> Rule:
@@ -382,6 +392,8 @@ def _as_costs(costs: Any, states: Sequence[str], decisions: Sequence[str]) -> np
 
 def _in_words(pieces: int, touches: int, unresolved: int, sampled: int, resolution: float) -> str:
     """How a search went."""
+    if not (touches or unresolved or sampled):
+        return "exhaustive"
     words = []
     if sampled:
         words.append(f"sampled at {resolution:.3g} of the smallest scale, for {sampled} pairs of decisions")
