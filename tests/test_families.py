@@ -6,6 +6,7 @@ import pytest
 
 import limen as lm
 
+
 def laplace(x, loc, scale):
     z = (x - loc) / scale
     below = mpmath.exp(z) / 2 if z <= 0 else 1 - mpmath.exp(-z) / 2
@@ -26,6 +27,15 @@ def exponential(x, scale, low):
     return mpmath.exp(-z) / scale, -mpmath.expm1(-z), mpmath.exp(-z)
 
 
+def poisson(x, mean):
+    if x != mpmath.floor(x):
+        return (mpmath.mpf(0), *poisson(mpmath.floor(x), mean)[1:])
+    if x < 0:
+        return mpmath.mpf(0), mpmath.mpf(0), mpmath.mpf(1)
+    mass = mpmath.exp(x * mpmath.log(mean) - mean - mpmath.loggamma(x + 1))
+    return mass, *(mpmath.gammainc(x + 1, *edges, regularized=True) for edges in ((mean, mpmath.inf), (0, mean)))
+
+
 def gaussian(x, mean, sd):
     z = (x - mean) / sd
     return mpmath.npdf(x, mean, sd), mpmath.erfc(-z / mpmath.sqrt(2)) / 2, mpmath.erfc(z / mpmath.sqrt(2)) / 2
@@ -36,10 +46,16 @@ ROWS = [
     (lm.laplace, laplace, (0.385, 1.7), [-1900.0, -3.1, 0.3, 0.385, 0.4, 2.6, 1900.5]),
     (lm.uniform, uniform, (-1.25, 3.5), [-1.3, -1.25, -1.0, 0.1, 3.4375, 3.5, 3.7]),
     (lm.exponential, exponential, (1.7, -0.25), [-0.3, -0.25, -0.2499, 0.7, 3.3, 1900.0]),
+    (lm.poisson, poisson, (0.37,), [-1.0, 0.0, 0.5, 1.0, 7.0, 150.0]),
+    (lm.poisson, poisson, (50.5,), [0.0, 3.0, 15.0, 16.0, 50.0, 51.0, 75.5, 76.0, 400.0]),
+    (lm.poisson, poisson, (12345.625,), [11000.0, 12345.0, 12346.0, 13900.0]),
 ]
 
 
-@pytest.mark.parametrize(("make", "formula", "parameters", "readings"), ROWS, ids=[row[0].__name__ for row in ROWS])
+IDS = [f"{row[0].__name__}{row[2]}" for row in ROWS]
+
+
+@pytest.mark.parametrize(("make", "formula", "parameters", "readings"), ROWS, ids=IDS)
 def test_logarithms_of_density_and_both_tails(make, formula, parameters, readings):
     """Relative 1e-13, or 1e-15 absolute where the logarithm is near 0: the numerical policy of the design."""
     d = make(*parameters)
@@ -51,7 +67,10 @@ def test_logarithms_of_density_and_both_tails(make, formula, parameters, reading
                 assert getattr(d, name)(x) == pytest.approx(wanted, rel=1e-13, abs=1e-15), (name, x)
 
 
-@pytest.mark.parametrize(("make", "parameters"), [row[::2] for row in ROWS], ids=[row[0].__name__ for row in ROWS])
+CONTINUOUS = [row[::2] for row in ROWS if not row[0](*row[2]).discrete]
+
+
+@pytest.mark.parametrize(("make", "parameters"), CONTINUOUS, ids=[row[0].__name__ for row in CONTINUOUS])
 def test_quantiles_from_both_tails_come_back(make, parameters):
     """To 1e-12 of the logarithm: a quantile is a double, and a reading's rounding moves its tail by some 1e-15 times
     the slope, at most 60 here."""
@@ -68,6 +87,7 @@ CROSSINGS = [
     (lm.laplace(0.0, 1.0), lm.laplace(3.0, 1.0), [1.5]),
     (lm.laplace(0.0, 1.0), lm.laplace(0.0, 4.0), [-np.log(4) / 0.75, np.log(4) / 0.75]),
     (lm.exponential(1.0), lm.exponential(3.0), [np.log(3) / (1 - 1 / 3)]),
+    (lm.poisson(3.2), lm.poisson(11.7), [7.0]),     # (11.7 - 3.2) / log(11.7 / 3.2) = 6.56, and counts are whole
     (lm.uniform(0.0, 1.0), lm.uniform(0.75, 2.75), [np.nextafter(1.0, 2.0)]),
 ]
 

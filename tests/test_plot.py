@@ -64,6 +64,13 @@ def test_curve_is_the_weighted_density_and_meets_its_peak(ax):
     assert curve.get_ydata().max() == pytest.approx(0.5 * spike.densities[1].pdf(0.3), rel=1e-4)
 
 
+def test_counts_are_drawn_at_integers(ax):
+    lm.plot.densities(lm.States({"dark": lm.poisson(3.2), "lit": lm.poisson(11.7)}, priors=[0.5, 0.5]), ax=ax)
+    for line in ax.lines:
+        x = np.asarray(line.get_xdata())
+        assert x.size > 5 and np.array_equal(x, np.round(x))
+
+
 def test_fit_shows_both_tails_as_counted(ax):
     lm.plot.fit(lm.gaussian(0.0, 1.0), [-1.5, -0.25, -0.25, 0.75, float("nan")], ax=ax)
     points = dict(zip(*ax.lines[0].get_data()))

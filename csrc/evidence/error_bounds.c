@@ -9,40 +9,15 @@
 #include <math.h>
 
 #include "../limen.h"
+#include "../numeric/constants.h"
+#include "../numeric/counting.h"
 #include "../numeric/fault.h"
-
-static const double log_sqrt_2pi = 0.91893853320467274178;
-
-/* log n! less Stirling's formula; the series is good to 1e-17 from 16 on. */
-static double stirling_error(double n)
-{
-    if (n < 16)
-        return lgamma(n + 1) - (n + 0.5) * log(n) + n - log_sqrt_2pi;
-    double m = n * n;
-    return (1.0 / 12 - (1.0 / 360 - (1.0 / 1260 - (1.0 / 1680 - 1.0 / 1188 / m) / m) / m) / m) / n;
-}
-
-/* x log(x / mean) - difference, where difference = x - mean is given, as x may be too large to hold it; by its series
- * where the two are close. */
-static double deviance(double x, double mean, double difference)
-{
-    if (fabs(difference) >= 0.1 * (x + mean))
-        return x * log(x / mean) - difference;
-    double v = difference / (x + mean), sum = difference * v, term = 2 * x * v;
-    for (int j = 3;; j += 2) {
-        term *= v * v;
-        double next = sum + term / j;
-        if (next == sum)
-            return sum;
-        sum = next;
-    }
-}
 
 /* log P(K = k) of n trials with rate p; 0 < k < n. */
 static double log_term(double k, double n, double p)
 {
-    return stirling_error(n) - stirling_error(k) - stirling_error(n - k) - deviance(k, n * p, k - n * p) -
-           deviance(n - k, n - n * p, n * p - k) + 0.5 * log(n / (k * (n - k))) - log_sqrt_2pi;
+    return lm_stirling_error(n) - lm_stirling_error(k) - lm_stirling_error(n - k) - lm_deviance(k, n * p, k - n * p) -
+           lm_deviance(n - k, n - n * p, n * p - k) + 0.5 * log(n / (k * (n - k))) - LM_LOG_SQRT_2PI;
 }
 
 /* log P(K >= k) where k > n p, or log P(K <= k) where k < n p; 0 < k < n. */

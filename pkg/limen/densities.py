@@ -10,7 +10,8 @@ import numpy as np
 
 from . import _core
 
-__all__ = ["Density", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture", "uniform"]
+__all__ = ["Density", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture", "poisson",
+           "uniform"]
 
 _FORMAT, _VERSION = "limen density", 1
 
@@ -158,6 +159,28 @@ def exponential(scale: float, low: float = 0.0) -> Density:
     -10.0
     """
     return Density._make("exponential", scale, low)
+
+
+def poisson(mean: float) -> Density:
+    """Counts of independent events, ``mean ** k * exp(-mean) / k!``; ``logpdf`` and ``pdf`` are masses.
+
+    Parameters
+    ----------
+    mean : float
+        Above 0.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Examples
+    --------
+    >>> dark, lit = lm.poisson(3.0), lm.poisson(12.0)
+    >>> lm.bayes(lm.States({"dark": dark, "lit": lit})).levels.tolist()
+    [7.0]
+    """
+    return Density._make("poisson", mean)
 
 
 def mixture(weights: Sequence[float], densities: Sequence[Density]) -> Density:
