@@ -5,6 +5,7 @@ import numpy as np
 import oracle
 import pytest
 
+import limen as lm
 from limen._arrays import decide_any, hysteresis_any
 
 LEVELS = [0.385, 1.7, 6.04]
@@ -70,3 +71,19 @@ def test_scalars_out_and_missing():
 def test_bad_input_is_named(width, start, words):
     with pytest.raises(ValueError, match=words):
         hysteresis_any([1.0, 2.0], LEVELS, CODES, width, start)
+
+
+def test_rules_count_what_hysteresis_decides():
+    x = np.random.default_rng(5).normal(1, 2, 3000)
+    x[::50] = np.nan
+    truth = (x > 0.5).astype(int)
+    r = lm.rule(LEVELS, [1, 0, 1, 0], ["a", "b"]).with_hysteresis(0.5)
+    codes = r.decide(x)
+    for t in (r.tally(x, truth), lm.tally_stream(r, x, truth, chunk=700)):
+        for d in range(2):
+            for s in range(2):
+                assert t.counts[d, s] == ((codes == d) & (truth == s)).sum()
+        assert t.invalid == 60
+    np.testing.assert_array_equal(lm.stream(r, x, chunk=77), codes)
+    with pytest.raises(ValueError, match="hysteresis"):
+        r.pack(x)

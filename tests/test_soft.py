@@ -80,6 +80,42 @@ def test_posteriors():
     np.testing.assert_allclose(got.sum(0), 1, rtol=0, atol=3e-6)
 
 
+RNG = np.random.default_rng(12)
+PAIRS = {
+    "laplace": (lm.laplace(0, 1), lm.laplace(1.5, 0.7), (-40, 40)),
+    "laplace-gaussian": (lm.laplace(0, 1), lm.gaussian(1, 2), (-40, 40)),
+    "exponential": (lm.exponential(1.0), lm.exponential(3.0, 0.5), (-2, 60)),
+    "uniform-gaussian": (lm.uniform(0, 2), lm.gaussian(1, 1), (-3, 5)),
+    "uniform": (lm.uniform(0, 2), lm.uniform(1, 4), (-1, 5)),
+    "tails": (lm.from_readings(RNG.standard_t(4, 4000)), lm.from_readings(2 + RNG.standard_t(6, 4000)), (-100, 100)),
+    "moved": (2 * lm.laplace(0, 1) + 1, -1.0 * lm.exponential(1.0) + 3, (-30, 30)),
+}
+
+
+@pytest.mark.parametrize("name", PAIRS)
+@pytest.mark.parametrize("dtype", ["float32", "float64"])
+def test_laws_with_kinks_edges_and_tails(name, dtype):
+    """LLRs that bend, jump to infinity, or are NaN where neither state can be, against the log densities."""
+    a, b, (low, high) = PAIRS[name]
+    dtype = np.dtype(dtype).type
+    soft = Soft((a, b), dtype=dtype)
+    edges = np.array([0.5, 1, 1.5, 2, 3, 4], dtype)
+    x = np.concatenate([np.linspace(low, high, 20_001), edges, np.nextafter(edges, dtype("-9")),
+                        np.nextafter(edges, dtype("9")), 1e3 * np.array([low, high])]).astype(dtype)
+    with np.errstate(invalid="ignore"):
+        wanted = a.logpdf(x.astype(float)) - b.logpdf(x.astype(float))
+    assert worst(soft(x), wanted.astype(dtype)) <= 1e-6
+    assert worst(soft.exact(x), wanted) <= 1e-12
+
+
+def test_states_make_them():
+    states = lm.States({"a": A, "b": B}, priors=[0.3, 0.7])
+    x = np.linspace(-5, 8, 1001)
+    assert worst(states.soft("a", "b", dtype="float64")(x), states.llr(x, "a", "b")) <= 1e-6
+    np.testing.assert_allclose(states.soft_posterior("b", "float64")(x), states.posterior(x)[:, 1], rtol=0, atol=1e-6)
+    assert isinstance(states.llr(1.0, 0, 1), float) and states.llr(x.reshape(7, -1), 0, 1).shape == (7, 143)
+
+
 def test_kinds_of_arrays():
     x = np.linspace(-5, 5, 24).reshape(4, 6)
     wanted = SOFT(x)

@@ -5,7 +5,6 @@ import json
 import os
 import subprocess
 import sys
-from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -14,8 +13,8 @@ import limen as lm
 from limen._arrays import decide_any, hysteresis_any, tally_any
 from limen.streaming import stream, tally_stream
 
-RULE = SimpleNamespace(levels=np.array([0.4, 1.7]), decisions=np.array([1, 0, 2]), names=("a", "b", "c"), invalid=255)
-SLOW = SimpleNamespace(**vars(RULE), width=0.8)
+RULE = lm.rule([0.4, 1.7], [1, 0, 2], ["a", "b", "c"])
+SLOW = RULE.with_hysteresis(0.8)
 X = np.random.default_rng(1).normal(1, 1, 10_007).astype(np.float32)
 X[::97] = np.nan
 CODES = decide_any(X, RULE.levels, RULE.decisions)
@@ -169,7 +168,7 @@ def test_a_record_of_something_else_is_refused(tmp_path):
     sink = tmp_path / "c.raw"
     with pytest.raises(Stop):
         stream(RULE, X, sink, chunk=1000, progress=stop_after(3000))
-    other = SimpleNamespace(**{**vars(RULE), "levels": np.array([0.4, 1.8])})
+    other = lm.rule([0.4, 1.8], [1, 0, 2], ["a", "b", "c"])
     with pytest.raises(ValueError, match="another rule"):
         stream(other, X, sink, resume=True)
     with pytest.raises(ValueError, match="another shape"):
@@ -233,9 +232,9 @@ def test_resident_memory_stays_bounded(tmp_path):
         file.truncate(300 << 20)
     code = """
 import sys, numpy as np
-from types import SimpleNamespace
-from limen.streaming import stream
-rule = SimpleNamespace(levels=[0.5], decisions=[0, 1], names=("a", "b"), invalid=255)
+import limen as lm
+from limen import stream
+rule = lm.rule([0.5], [0, 1], ["a", "b"])
 def status(field):
     return next(int(l.split()[1]) for l in open("/proc/self/status") if l.startswith(field)) >> 10
 stream(rule, np.zeros(100, "f4"))

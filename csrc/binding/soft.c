@@ -1,24 +1,7 @@
 /* limen._core.Soft: a log likelihood ratio or a posterior by its compiled table, over arrays of any layout. */
-#include "slice.h"
-
 #include "../numeric/memory.h"
-
-#define LM_DENSITIES "density.h"
-#if __has_include(LM_DENSITIES)
-#include LM_DENSITIES
-#else /* a module without density objects has none to be given here */
-static const lm_density *lm_density_of(PyObject *object, const char *argument)
-{
-    PyErr_Format(PyExc_TypeError, "%s is %R; expected a density", argument, object);
-    return NULL;
-}
-
-static bool lm_density_calls_back(const lm_density *density)
-{
-    (void)density;
-    return false;
-}
-#endif
+#include "density.h"
+#include "slice.h"
 
 typedef struct {
     PyObject_HEAD lm_log_ratio *ratio;
@@ -162,23 +145,57 @@ static PyObject *soft_values(PyObject *self, PyObject *args, PyObject *keywords)
     return (PyObject *)out;
 }
 
-/* exact(x): float64, without the table. */
-static PyObject *soft_exact(PyObject *self, PyObject *object)
+/* The values of a ratio at x, without a table. */
+static PyObject *exact_values(const lm_log_ratio *ratio, bool calls_back, PyObject *object)
 {
-    const soft_object *s = (soft_object *)self;
     PyArrayObject *x = (PyArrayObject *)PyArray_FROMANY(object, NPY_DOUBLE, 0, 0, NPY_ARRAY_CARRAY_RO);
     if (x == NULL)
         return NULL;
     PyArrayObject *out = (PyArrayObject *)PyArray_SimpleNew(PyArray_NDIM(x), PyArray_DIMS(x), NPY_DOUBLE);
     if (out != NULL) {
-        lm_status status = lm_log_ratio_values(s->ratio, PyArray_DATA(x), PyArray_DATA(out), (size_t)PyArray_SIZE(x));
-        if (status != LM_OK) {
+        lm_status status;
+        const size_t n = (size_t)PyArray_SIZE(x);
+        if (calls_back) {
+            status = lm_log_ratio_values(ratio, PyArray_DATA(x), PyArray_DATA(out), n);
+        } else {
+            Py_BEGIN_ALLOW_THREADS status = lm_log_ratio_values(ratio, PyArray_DATA(x), PyArray_DATA(out), n);
+            Py_END_ALLOW_THREADS
+        }
+        if (status != LM_OK || PyErr_Occurred()) {
             lm_raise(status, NULL);
             Py_CLEAR(out);
         }
     }
     Py_DECREF(x);
-    return (PyObject *)out;
+    return out == NULL ? NULL : PyArray_Return(out);
+}
+
+/* exact(x): float64, without the table. */
+static PyObject *soft_exact(PyObject *self, PyObject *object)
+{
+    const soft_object *s = (soft_object *)self;
+    return exact_values(s->ratio, s->calls_back, object);
+}
+
+/* log_ratio(a, b, x): the exact log likelihood ratio, float64. */
+static PyObject *log_ratio(PyObject *module, PyObject *const *args, Py_ssize_t n)
+{
+    (void)module;
+    if (n != 3) {
+        PyErr_SetString(PyExc_TypeError, "log_ratio takes two densities and readings");
+        return NULL;
+    }
+    const lm_density *a = lm_density_of(args[0], "a"), *b = a == NULL ? NULL : lm_density_of(args[1], "b");
+    if (b == NULL)
+        return NULL;
+    lm_log_ratio *ratio;
+    lm_fault fault = {.argument = NULL, .index = -1};
+    lm_status status = lm_log_ratio_new(a, b, &ratio, &fault);
+    if (status != LM_OK)
+        return lm_raise(status, &fault);
+    PyObject *result = exact_values(ratio, lm_density_calls_back(a) || lm_density_calls_back(b), args[2]);
+    lm_log_ratio_free(ratio);
+    return result;
 }
 
 static PyObject *get_segments(PyObject *self, void *unused)
@@ -223,10 +240,16 @@ static PyType_Spec spec = {
     .slots = slots,
 };
 
+static PyMethodDef functions[] = {
+    {"log_ratio", (PyCFunction)(void (*)(void))log_ratio, METH_FASTCALL,
+     "log_ratio($module, a, b, x, /)\n--\n\nlog f_a(x) - log f_b(x), without cancellation. See limen.States.llr."},
+    {NULL, NULL, 0, NULL},
+};
+
 int lm_bind_soft(PyObject *module)
 {
     PyObject *type = PyType_FromModuleAndSpec(module, &spec, NULL);
     int failed = type == NULL || PyModule_AddObjectRef(module, "Soft", type) < 0;
     Py_XDECREF(type);
-    return failed ? -1 : 0;
+    return failed ? -1 : PyModule_AddFunctions(module, functions);
 }

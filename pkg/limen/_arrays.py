@@ -401,6 +401,27 @@ def tally_any(x: Any, levels: Any, codes: Any, truth: Any = None, decisions_coun
     return (counts[:-1, 0] if truth is None else counts[:-1]), invalid
 
 
+def tally_held_any(x: Any, levels: Any, codes: Any, width: Any, truth: Any = None, decisions_count: int | None = None,
+                   states_count: int | None = None, start: Any = None,
+                   threads: int | None = None) -> tuple[np.ndarray, int, Any]:
+    """tally_any of the decisions that hysteresis_any makes, and where it ended.
+
+    Returns
+    -------
+    counts, invalid : as from tally_any
+    end : as from hysteresis_any
+    """
+    held, end = hysteresis_any(x, levels, codes, width, start)
+    held = np.ma.getdata(np.asarray(held))
+    lost = held == 255
+    decisions = int(np.max(codes)) + 1 if decisions_count is None else decisions_count
+    known = None if truth is None else _as_truth(truth, held.shape)[~lost]
+    # a code is a reading whose levels lie between the codes
+    counts, _ = tally_any(held[~lost], np.arange(1, decisions), np.arange(decisions), known, decisions, states_count,
+                          threads=threads)
+    return counts, int(lost.sum()), end
+
+
 def _as_truth(truth: Any, shape: tuple[int, ...]) -> np.ndarray:
     array = np.asarray(truth)
     if array.size == 0:

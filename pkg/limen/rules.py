@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 
 from . import _core, _files
-from ._arrays import decide_any, hysteresis_any, pack_any, tally_any
+from ._arrays import decide_any, hysteresis_any, pack_any, tally_any, tally_held_any
 from .states import States
 from .tallies import Tally
 
@@ -93,17 +93,50 @@ class Rule:
             return decide_any(x, self.levels, self.decisions, invalid=self.invalid, out=out, threads=threads)
         return hysteresis_any(x, self.levels, self.decisions, self.width, start, invalid=self.invalid, out=out)[0]
 
-    def tally(self, x: Any, truth: Any = None, states: Sequence[str] | None = None) -> Tally:
-        """Count decisions, by true state where `truth` (an index into names, or into `states`) is given."""
+    def tally(self, x: Any, truth: Any = None, states: Sequence[str] | None = None, threads: int | None = None,
+              start: Any = None) -> Tally:
+        """Count decisions, by true state where it is known, in one pass.
+
+        Parameters
+        ----------
+        x : array_like of real numbers
+            A dask array is counted where its blocks are; only the counts travel.
+        truth : int array_like of the shape of x, optional
+            The true state of each reading: an index into `states`.
+        states : sequence of str, optional
+            By default the names of the decisions.
+        threads : int, optional
+        start : int, optional
+            With hysteresis, the interval in which the readings start.
+        """
         if truth is not None and states is None:
             states = self.names
-        counts, invalid = tally_any(x, self.levels, self.decisions, truth, len(self.names),
-                                    None if states is None else len(states))
+        columns = None if states is None else len(states)
+        if self.width is None:
+            counts, invalid = tally_any(x, self.levels, self.decisions, truth, len(self.names), columns,
+                                        threads=threads)
+        else:
+            counts, invalid, _ = tally_held_any(x, self.levels, self.decisions, self.width, truth, len(self.names),
+                                                columns, start, threads)
         return Tally(counts, invalid, self.names, None if truth is None else states)
 
-    def pack(self, x: Any, bitorder: str = "little", out: np.ndarray | None = None) -> Any:
-        """One bit a reading, for rules between two decisions."""
-        return pack_any(x, self.levels, self.decisions, bitorder=bitorder, out=out)
+    def pack(self, x: Any, bitorder: str = "little", invalid: int | None = None, out: np.ndarray | None = None,
+             threads: int | None = None) -> Any:
+        """One bit a reading along the last axis, for rules between two decisions.
+
+        Parameters
+        ----------
+        x : array_like of real numbers
+        bitorder : "little" or "big"
+            Whether the first reading is the lowest or the highest bit of its byte.
+        invalid : 0 or 1, optional
+            The bit of NaN, which is an error otherwise.
+        out : uint8 ndarray, optional
+        threads : int, optional
+        """
+        if self.width is not None:
+            raise ValueError(f"the rule has hysteresis of width {self.width}; pack the codes of decide instead")
+        return pack_any(x, self.levels, self.decisions, bitorder=bitorder, invalid=invalid, out=out, threads=threads)
 
     def with_hysteresis(self, width: float) -> Rule:
         """The same rule, left upwards at level + width / 2 and downwards below level - width / 2."""

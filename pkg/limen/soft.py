@@ -18,9 +18,9 @@ NAN_BYTE = -128
 class Soft:
     """The log likelihood ratio of two states, or the posterior of one, as a function of arrays.
 
-    Made by ``States.soft``. The line of readings is cut into segments with a polynomial each, found from the densities
-    themselves: any densities, their tails included. Readings that no segment covers (see `span`) take the exact way,
-    which is some hundred times slower.
+    Made by ``States.soft`` and ``States.soft_posterior``. The line of readings is cut into segments with a polynomial
+    each, found from the densities themselves: any densities, their tails included. Readings that no segment covers
+    (see `span`) take the exact way, which is some hundred times slower.
 
     Parameters
     ----------

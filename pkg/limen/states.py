@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from . import _core
 from ._core import Density as _CoreDensity
 from .soft import Soft
 
@@ -80,7 +81,7 @@ class States:
 
     def llr(self, x: Any, a: Any, b: Any) -> Any:
         """``log f_a(x) - log f_b(x)`` at each reading, natural logarithm."""
-        return Soft([self.densities[self.index(a)], self.densities[self.index(b)]]).exact(x)
+        return _core.log_ratio(self.densities[self.index(a)], self.densities[self.index(b)], x)
 
     def posterior(self, x: Any) -> np.ndarray:
         """float64[..., state]: the probability of each state at each reading; NaN where no state can give it."""
@@ -93,6 +94,10 @@ class States:
     def soft(self, a: Any, b: Any, dtype: Any = "float32", step: float | None = None) -> Soft:
         """The LLR of two states as a function of arrays, at array speed: see `limen.Soft`."""
         return Soft([self.densities[self.index(a)], self.densities[self.index(b)]], dtype=dtype, step=step)
+
+    def soft_posterior(self, state: Any, dtype: Any = "float32") -> Soft:
+        """The posterior of a state as a function of arrays, at array speed: see `limen.Soft`."""
+        return Soft(self.densities, self.priors, self.index(state), dtype=dtype)
 
     def to_dict(self) -> dict[str, Any]:
         """Plain Python, for JSON."""

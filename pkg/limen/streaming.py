@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from ._arrays import as_codes, as_levels, as_readings, decide_any, hysteresis_any, tally_any
+from ._arrays import as_codes, as_levels, as_readings, decide_any, hysteresis_any, tally_any, tally_held_any
 from ._progress import progress_of
 from .tallies import Tally
 
@@ -33,8 +33,7 @@ def stream(rule: Any, source: Any, sink: Any = None, *, chunk: int = CHUNK, prog
     Parameters
     ----------
     rule : Rule
-        With or without hysteresis (`width`), whose state runs on from chunk to chunk; anything with `levels`,
-        `decisions`, `names` and `invalid` will do.
+        With or without hysteresis, whose state runs on from chunk to chunk.
     source : array, path or iterable
         A memmap, h5py dataset, zarr array, or anything else with a shape that can be sliced along its first axis; the
         path of a ``.npy`` file, or of a raw file together with `dtype`; or an iterable of chunks.
@@ -68,9 +67,8 @@ def stream(rule: Any, source: Any, sink: Any = None, *, chunk: int = CHUNK, prog
     Examples
     --------
     >>> import limen as lm, numpy as np
-    >>> from types import SimpleNamespace
     >>> np.arange(6, dtype="int16").tofile("recording.raw")
-    >>> rule = SimpleNamespace(levels=[2.5], decisions=[0, 1], names=["low", "high"], invalid=255)
+    >>> rule = lm.rule([2.5], [0, 1], ["low", "high"])
     >>> lm.stream(rule, "recording.raw", "codes.npy", dtype="int16")
     'codes.npy'
     >>> np.load("codes.npy").tolist()
@@ -121,8 +119,7 @@ def tally_stream(rule: Any, source: Any, truth: Any = None, *, states: Any = Non
     Examples
     --------
     >>> import limen as lm, numpy as np
-    >>> from types import SimpleNamespace
-    >>> rule = SimpleNamespace(levels=[2.5], decisions=[0, 1], names=["low", "high"], invalid=255)
+    >>> rule = lm.rule([2.5], [0, 1], ["low", "high"])
     >>> lm.tally_stream(rule, ([1.0, 2.0], [3.0, np.nan])).counts.tolist()
     [2, 1]
     """
@@ -181,12 +178,12 @@ class _Decider:
     def tally(self, x: np.ndarray, truth: Any, decisions: int, states: int) -> tuple[np.ndarray, int]:
         if self.width is None:
             return tally_any(x, self.levels, self.codes, truth, decisions, states, threads=self.threads)
-        codes = self(x)  # then a code is a reading whose levels lie between the codes
-        lost = codes == self.invalid
-        known = None if truth is None else np.asarray(truth)[~lost]
-        counts, _ = tally_any(codes[~lost], np.arange(1, decisions), np.arange(decisions), known, decisions, states,
-                              threads=self.threads)
-        return counts, int(lost.sum())
+        runs = np.moveaxis(x, 0, -1)
+        known = None if truth is None else np.moveaxis(np.asarray(truth), 0, -1)
+        counts, lost, end = tally_held_any(runs, self.levels, self.codes, self.width, known, decisions, states,
+                                           self.state, self.threads)
+        self.state = end if isinstance(end, int) else end.tolist()
+        return counts, lost
 
 
 # ---- sources ----
