@@ -30,6 +30,7 @@ CASES = [
     ("uniform reversed", lambda: lm.uniform(2.0, 1.25), ValueError, ["high", "1.25"]),
     ("poisson negative", lambda: lm.poisson(-3.5), ValueError, ["mean", "-3.5"]),
     ("counts against continuous", lambda: lm.bayes(states(densities=(EMPTY, lm.poisson(3.0)))), ValueError, []),
+    ("point nan", lambda: lm.point(float("nan")), ValueError, ["value", "nan"]),
     ("weights negative", lambda: lm.mixture([1.5, -0.5], [EMPTY, CAP]), ValueError, ["weights", "-0.5"]),
     ("weights too few", lambda: lm.mixture([1.0], [EMPTY, CAP]), ValueError, ["weights"]),
     ("weights sum", lambda: lm.mixture([0.5, 0.6], [EMPTY, CAP]), ValueError, ["weights", "1.1"]),

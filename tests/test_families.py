@@ -27,6 +27,10 @@ def exponential(x, scale, low):
     return mpmath.exp(-z) / scale, -mpmath.expm1(-z), mpmath.exp(-z)
 
 
+def point(x, value):
+    return tuple(mpmath.mpf(holds) for holds in (x == value, x >= value, x < value))
+
+
 def poisson(x, mean):
     if x != mpmath.floor(x):
         return (mpmath.mpf(0), *poisson(mpmath.floor(x), mean)[1:])
@@ -46,6 +50,7 @@ ROWS = [
     (lm.laplace, laplace, (0.385, 1.7), [-1900.0, -3.1, 0.3, 0.385, 0.4, 2.6, 1900.5]),
     (lm.uniform, uniform, (-1.25, 3.5), [-1.3, -1.25, -1.0, 0.1, 3.4375, 3.5, 3.7]),
     (lm.exponential, exponential, (1.7, -0.25), [-0.3, -0.25, -0.2499, 0.7, 3.3, 1900.0]),
+    (lm.point, point, (1.3,), [-1.0, 1.2, 1.3, 1.4]),
     (lm.poisson, poisson, (0.37,), [-1.0, 0.0, 0.5, 1.0, 7.0, 150.0]),
     (lm.poisson, poisson, (50.5,), [0.0, 3.0, 15.0, 16.0, 50.0, 51.0, 75.5, 76.0, 400.0]),
     (lm.poisson, poisson, (12345.625,), [11000.0, 12345.0, 12346.0, 13900.0]),
@@ -83,6 +88,9 @@ def test_quantiles_from_both_tails_come_back(make, parameters):
 
 
 CROSSINGS = [
+    # a point takes one double out of a continuous law, and of two points each takes its half
+    (lm.point(1.3), lm.gaussian(0.0, 1.0), [1.3, np.nextafter(1.3, 2.0)]),
+    (lm.point(1.5), lm.point(2.5), [2.0]),
     # two Laplace laws of one scale cross once, midway; of two scales twice, on both sides of the narrow one
     (lm.laplace(0.0, 1.0), lm.laplace(3.0, 1.0), [1.5]),
     (lm.laplace(0.0, 1.0), lm.laplace(0.0, 4.0), [-np.log(4) / 0.75, np.log(4) / 0.75]),

@@ -2,7 +2,7 @@
 
 from . import plot
 from ._core import __version__
-from .densities import Density, density, exponential, from_readings, gaussian, laplace, mixture, poisson, uniform
+from .densities import Density, density, exponential, from_readings, gaussian, laplace, mixture, point, poisson, uniform
 from .evidence import error_bounds
 from .reports import report
 from .rules import Assessment, Rule, bayes, load, rule
@@ -32,6 +32,7 @@ __all__ = [
     "load",
     "mixture",
     "plot",
+    "point",
     "poisson",
     "report",
     "rule",

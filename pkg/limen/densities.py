@@ -10,8 +10,8 @@ import numpy as np
 
 from . import _core
 
-__all__ = ["Density", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture", "poisson",
-           "uniform"]
+__all__ = ["Density", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture", "point",
+           "poisson", "uniform"]
 
 _FORMAT, _VERSION = "limen density", 1
 
@@ -181,6 +181,27 @@ def poisson(mean: float) -> Density:
     [7.0]
     """
     return Density._make("poisson", mean)
+
+
+def point(value: float) -> Density:
+    """All probability at one reading: a stuck sensor, a clipped converter.
+
+    Parameters
+    ----------
+    value : float
+
+    Raises
+    ------
+    ValueError
+        A value that is not finite.
+
+    Examples
+    --------
+    >>> clipped = lm.mixture([0.25, 0.75], [lm.point(0.0), lm.exponential(2.0)])
+    >>> clipped.cdf([-1.0, 0.0]).tolist()
+    [0.0, 0.25]
+    """
+    return Density._make("point", value)
 
 
 def mixture(weights: Sequence[float], densities: Sequence[Density]) -> Density:

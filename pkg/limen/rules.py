@@ -33,9 +33,9 @@ class Rule:
     >>> r([0.2, 1.0, 2.4, 2.5, float("nan")]).tolist()
     [0, 1, 1, 0, 255]
     >>> print(r)
-            -inf <= reading < 1.0         normal
-             1.0 <= reading < 2.5         alarm
-             2.5 <= reading < inf         normal
+            -inf <= reading < 1.0           normal
+             1.0 <= reading < 2.5           alarm
+             2.5 <= reading < inf           normal
     """
 
     __slots__ = {
@@ -211,7 +211,7 @@ static inline unsigned char {name}_decide(double x)
 
     def __str__(self) -> str:
         edges = [-math.inf, *self.levels.tolist(), math.inf]
-        return "\n".join(f"{left!r:>12} <= reading < {right!r:<12}{self.names[decision]}"
+        return "\n".join(f"{left!r:>12} <= reading < {right!r:<12}  {self.names[decision]}"
                          for left, right, decision in zip(edges[:-1], edges[1:], self.decisions))
 
 
