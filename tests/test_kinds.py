@@ -217,6 +217,10 @@ def test_two_worker_processes_count_as_one(tmp_path):
                                   local_directory=str(tmp_path)) as cluster, distributed.Client(cluster):
         lazy = da.from_array(mapped, chunks=25_000)
         np.testing.assert_array_equal(lm.decide(lazy, LEVELS, CODES).compute(), lm.decide(x, LEVELS, CODES))
-        counts, invalid = tally_any(lazy, LEVELS, CODES, truth, 3, 2)
-    np.testing.assert_array_equal(counts, wanted[0])
-    assert invalid == wanted[1]
+        rule = lm.rule(LEVELS, CODES, ["a", "b", "c"])
+        t = rule.tally(lazy, truth, states=["a", "b"])
+        states = lm.States({"a": lm.gaussian(0, 1), "b": lm.laplace(2, 1)})
+        llr = states.soft("a", "b")
+        np.testing.assert_array_equal(llr(lazy).compute(), llr(x))
+    np.testing.assert_array_equal(t.counts, wanted[0])
+    assert t.invalid == wanted[1]
