@@ -320,10 +320,13 @@ lm_verdict lm_gap_judge(lm_gap *gap, double low, double high)
         if (up.high <= down.low && up.low < down.high)
             return LM_GAP_FALLING;
     }
-    /* Nothing left to see: the whole range of h is no wider than the rounding that went into it. */
+    /* Nothing left to see: the whole range of h is no wider than the rounding that went into it. A term that is a small
+     * part of its sum brings that part of its own rounding: a narrow one far away has much, and counts for nothing. */
     double widest = fmax(plus.high - minus.low, minus.high - plus.low), noise = DBL_EPSILON;
-    for (size_t k = 0; k < n; k++)
-        noise += gap->bound[k].noise;
+    for (size_t k = 0; k < n; k++) {
+        double part = exp(fmin(0, gap->bound[k].ratio.high - (gap->bound[k].positive ? plus.low : minus.low)));
+        noise += part > 0 ? part * gap->bound[k].noise : 0;
+    }
     if (widest <= 4 * noise)
         return LM_GAP_TIED;
     return LM_GAP_OPEN;
