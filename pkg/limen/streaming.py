@@ -21,7 +21,7 @@ from .tallies import Tally
 
 __all__ = ["stream", "tally_stream"]
 
-CHUNK = 1 << 22         # readings: 16 MB of float32
+CHUNK = 1 << 23         # readings: 32 MB of float32
 RECORD_EVERY = 0.5      # seconds between records of how far a run has got
 RECORD = "limen stream"
 
