@@ -88,6 +88,26 @@ done:
     return result;
 }
 
+/* pareto_tail(readings, threshold) -> (readings above, scale, shape, their standard errors, log likelihood) */
+static PyObject *pareto_tail(PyObject *module, PyObject *args)
+{
+    (void)module;
+    PyObject *given;
+    double threshold;
+    if (!PyArg_ParseTuple(args, "Od:pareto_tail", &given, &threshold))
+        return NULL;
+    PyArrayObject *readings = (PyArrayObject *)PyArray_FROMANY(given, NPY_DOUBLE, 1, 1, NPY_ARRAY_IN_ARRAY);
+    if (readings == NULL)
+        return NULL;
+    lm_pareto_tail tail;
+    lm_fault fault = {.index = -1};
+    lm_status status = lm_pareto_fit(PyArray_DATA(readings), (size_t)PyArray_SIZE(readings), threshold, &tail, &fault);
+    Py_DECREF(readings);
+    return status != LM_OK ? lm_raise(status, &fault)
+                           : Py_BuildValue("(dddddd)", tail.readings, tail.scale, tail.shape, tail.scale_error,
+                                           tail.shape_error, tail.log_likelihood);
+}
+
 static PyObject *error_bounds(PyObject *module, PyObject *args)
 {
     (void)module;
@@ -106,6 +126,8 @@ static PyMethodDef functions[] = {
     {"spline", spline, METH_VARARGS,
      "spline($module, type, knots, log_densities, slopes, tail_scales, tail_shapes, about, /)\n--\n\n"
      "The density that a recipe of from_readings describes."},
+    {"pareto_tail", pareto_tail, METH_VARARGS,
+     "pareto_tail($module, readings, threshold, /)\n--\n\nThe likeliest generalized Pareto tail above a threshold."},
     {"error_bounds", error_bounds, METH_VARARGS,
      "error_bounds($module, errors, trials, confidence, /)\n--\n\nExact bounds of a rate."},
     {NULL, NULL, 0, NULL},

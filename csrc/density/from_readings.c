@@ -1,8 +1,8 @@
 /* The law fitted to recordings: exp(piecewise cubic) between two thresholds, a generalized Pareto tail beyond each.
  *
- * The standard law counts from a knot near the middle, in a power of two near the narrowest piece, so that knots
- * stay exact. Masses of the body come from Gauss-Legendre quadrature on panels over which the log density varies by 1
- * at most, where 16 nodes are exact to rounding; a panel's part is then one more such sum.
+ * The standard law counts from the knot nearest 0, in a power of two near the narrowest piece, so that knots many
+ * decades apart stay apart. Masses of the body come from Gauss-Legendre quadrature on panels over which the log density
+ * varies by 1 at most, where 16 nodes are exact to rounding; a panel's part is then one more such sum.
  */
 #include <float.h>
 #include <math.h>
@@ -577,9 +577,11 @@ static void standardise(law *l)
 {
     const lm_spline_law *g = &l->law;
     double narrow = INFINITY;
+    l->shift = g->knot[0];
+    for (size_t i = 1; i < g->knots; i++)
+        l->shift = fabs(g->knot[i]) < fabs(l->shift) ? g->knot[i] : l->shift;
     for (size_t i = 0; i < l->pieces; i++)
         narrow = fmin(narrow, g->knot[i + 1] - g->knot[i]);
-    l->shift = g->knot[g->knots / 2];
     l->scale = ldexp(1, ilogb(narrow));
     double log_scale = log(l->scale);
     for (size_t i = 0; i <= l->pieces; i++)

@@ -57,6 +57,9 @@ def spline(
     about: tuple[float, tuple[float, float], tuple[float, float], float],
     /,
 ) -> Any: ...
+def pareto_tail(
+    readings: NDArray[np.float64], threshold: float, /
+) -> tuple[float, float, float, float, float, float]: ...
 def error_bounds(errors: float, trials: float, confidence: float, /) -> tuple[float, float]: ...
 
 decide: np.ufunc

@@ -51,6 +51,18 @@ class Density(_core.Density):
     def __neg__(self) -> Density:
         return self._moved(0.0, -1.0)
 
+    @property
+    def fit_notes(self) -> str:
+        """What `from_readings` found, in words: the lattice, the thresholds, the tails. Empty for other densities."""
+        if self._recipe[0] != "from_readings":
+            return ""
+        knots, _, _, _, shapes, (readings, counts, errors, step) = self._recipe[1:]
+        lattice = f"on a lattice of {step:.6g}" if step > 0 else "on no lattice"
+        below, above = (f"{count:.0f} readings, shape {shape:.3f} (standard error {error:.3f})"
+                        for count, shape, error in zip(counts, shapes, errors))
+        return (f"{readings:.0f} readings {lattice}; {len(knots)} knots; tail below {knots[0]:.6g}: {below}; "
+                f"tail above {knots[-1]:.6g}: {above}")
+
     def to_dict(self) -> dict[str, Any]:
         """Plain Python, for JSON; `limen.density` makes it a density again."""
         return {"format": _FORMAT, "version": _VERSION, **_plain(self._recipe)}
@@ -244,12 +256,14 @@ def from_readings(readings: Any, tails: str = "pareto") -> Density:
     Density
         Its body is a log-spline whose knots the Bayes information criterion chooses (Stone, Hansen, Kooperberg and
         Truong, Ann. Statist. 25 (1997) 1371; Schwarz, Ann. Statist. 6 (1978) 461); so are the thresholds of its tails.
-        Far beyond the last reading it is an extrapolation.
+        ``fit_notes`` tells thresholds, shapes and their standard errors. Shapes stay from 0 (exponential: no reading is
+        impossible) to 2 (so that one wild reading does not carry the tail away). Far beyond the last reading it is an
+        extrapolation: hold it against the standards of your field before anybody's safety hangs on it.
 
     Raises
     ------
     ValueError
-        Too few readings, or one that is not finite.
+        Too few readings, one that is not finite, or readings no further apart than doubles round.
 
     Examples
     --------
@@ -257,6 +271,8 @@ def from_readings(readings: Any, tails: str = "pareto") -> Density:
     >>> d = lm.from_readings(readings)
     >>> print(f"{d.mean:.1f} {d.sd:.1f}")
     20.0 3.0
+    >>> print(d.fit_notes)
+    5000 readings on no lattice; ... knots; tail below ...: ... readings, shape 0.000 (standard error ...); ...
     """
     if tails != "pareto":
         raise ValueError(f"tails is {tails!r}; expected 'pareto'")
