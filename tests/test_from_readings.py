@@ -12,6 +12,7 @@ import limen as lm
 from limen import _core
 
 CAPTURES = Path(__file__).resolve().parent.parent / "notebooks" / "captures"
+REFERENCE = Path(__file__).resolve().parent / "reference"
 
 
 def parts(d):
@@ -295,3 +296,26 @@ def test_tail_alone_refuses():
         _core.pareto_tail(BELL, 1e9)
     with pytest.raises(ValueError, match="finite"):
         _core.pareto_tail([1.0, np.nan], 0.0)
+
+
+@pytest.mark.parametrize("threshold, count, shape, scale, likelihood, shape_error, scale_error", [
+    (10.0, 109, 0.496985802366719, 6.97546804807505, -374.892990232352, 0.13628382, 1.1134906),
+    (20.0, 36, 0.684152180483332, 9.63513283824253, -142.184457695025, None, None),
+])
+def test_danish_fire_losses(threshold, count, shape, scale, likelihood, shape_error, scale_error):
+    """A. J. McNeil, ASTIN Bull. 27 (1997), prints shape 0.50 and scale 6.98 above 10, 0.68 and 9.63 above 20 (from
+    memory); the digits here are an independent maximum of the same likelihood, found to about 1e-9."""
+    losses = np.loadtxt(REFERENCE / "danish_fire_losses.csv")
+    tail = _core.pareto_tail(losses, threshold)
+    assert tail[0] == count
+    assert tail[1:3] == pytest.approx((scale, shape), rel=1e-9)
+    assert tail[5] == pytest.approx(likelihood, rel=1e-9)
+    if shape_error is not None:
+        assert tail[3:5] == pytest.approx((scale_error, shape_error), rel=1e-6)
+
+
+def test_danish_quantile():
+    """McNeil 1997 prints 94.3 for the 0.999 quantile of all 2167 losses, from the tail above 10 (from memory)."""
+    _, scale, shape, *_ = _core.pareto_tail(np.loadtxt(REFERENCE / "danish_fire_losses.csv"), 10.0)
+    for p, quantile in ((0.99, 27.2899874004874), (0.999, 94.3393520570714), (0.9999, 304.901581023123)):
+        assert 10 + scale / shape * ((109 / 2167 / (1 - p)) ** shape - 1) == pytest.approx(quantile, rel=1e-8)
