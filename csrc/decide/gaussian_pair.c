@@ -8,6 +8,7 @@
 #include <float.h>
 #include <math.h>
 
+#include "../numeric/logspace.h"
 #include "crossings.h"
 
 /* One Newton step on the gap itself takes out what rounding of the coefficients left. */
@@ -22,7 +23,7 @@ size_t lm_gaussian_pair(const lm_gap *gap, double levels[2])
     const lm_term *one = &gap->term[0].term, *two = &gap->term[1].term;
     double s1 = fabs(one->scale), s2 = fabs(two->scale), d = two->shift - one->shift;
     double unlike = (s1 - s2) / s2 * ((s1 + s2) / s2); /* all lengths in units of s2 */
-    double log_ratio = one->log_weight - two->log_weight - log1p((s1 - s2) / s2);
+    double log_ratio = one->log_weight - two->log_weight - lm_log_quotient(s1, s2);
     double apart = d / s2, r = s1 / s2;
     double discriminant = apart * apart - 2 * log_ratio * unlike;
     if (unlike == 0) {

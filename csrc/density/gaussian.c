@@ -2,6 +2,7 @@
 #include <math.h>
 
 #include "../numeric/constants.h"
+#include "../numeric/logspace.h"
 #include "../numeric/normal.h"
 #include "family.h"
 
@@ -83,7 +84,7 @@ static quadratic prepare(const lm_term *a, const lm_term *b)
 {
     double sa = fabs(a->scale), sb = fabs(b->scale), apart = a->shift - b->shift;
     return (quadratic){
-        .constant = a->log_weight - b->log_weight - log1p((sa - sb) / sb),
+        .constant = a->log_weight - b->log_weight - lm_log_quotient(sa, sb),
         .near = sa - sb,
         .sum = sa + sb,
         .far = sb * apart,

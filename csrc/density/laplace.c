@@ -71,7 +71,7 @@ static lm_range score_range(const lm_term *term, double low, double high)
  * side * (t (s_a - s_b) / (s_a s_b) + d / s_a), where nothing cancels that the parameters do not cancel. */
 static double ratio_at(const lm_term *a, const lm_term *b, double x, double side_a, double side_b)
 {
-    double sa = fabs(a->scale), sb = fabs(b->scale), t = x - b->shift, constant = log1p((sb - sa) / sa);
+    double sa = fabs(a->scale), sb = fabs(b->scale), t = x - b->shift, constant = lm_log_quotient(sb, sa);
     if (side_a != side_b)
         return constant - side_a * ((x - a->shift) / sa) + side_b * (t / sb);
     double tilt = sa == sb ? 0 : t / sa * ((sa - sb) / sb);

@@ -30,4 +30,14 @@ static inline double lm_log_sub(double a, double b)
     return b == -INFINITY ? a : a <= b ? -INFINITY : a + lm_log1mexp(b - a);
 }
 
+/* log(a / b) for a, b > 0: from the difference where they are alike, as rounding of a / b would show; not elsewhere, as
+ * (a - b) / b near -1 has lost a. */
+static inline double lm_log_quotient(double a, double b)
+{
+    if (a > 0.5 * b && a < 2 * b)
+        return log1p((a - b) / b);
+    double quotient = a / b;
+    return quotient > 0x1p-1022 && quotient < INFINITY ? log(quotient) : log(a) - log(b);
+}
+
 #endif

@@ -1,0 +1,91 @@
+"""Levels of mixtures of Gaussians against a search of another kind, settled by mpmath: none missed, none invented."""
+
+import mpmath
+import numpy as np
+import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as some
+from reference import levels as other
+
+import limen as lm
+
+
+def assert_found(problem):
+    """Each level within 1e-12 of itself, or within the rounding of the log densities over the slope of the gap."""
+    missed, invented, count, agree = other.compare(problem)
+    assert (missed, invented, agree) == ([], [], True)
+    return count
+
+
+@given(some.integers(0, 2**63))
+@settings(derandomize=True, max_examples=60, deadline=None, suppress_health_check=list(HealthCheck))
+def test_random_mixtures(seed):
+    assert_found(other.random_problem(np.random.default_rng(seed)))
+
+
+@pytest.mark.slow
+def test_more_random_mixtures():
+    """`python tests/reference/levels.py --count 10000` tries as many as one has time for."""
+    for seed in range(100_000, 100_400):
+        assert_found(other.random_problem(np.random.default_rng(seed)))
+
+
+def one(mean, sd):
+    return [1.0], [mean], [sd]
+
+
+HARD = {
+    "a comb": (other.Problem([0.5, 0.5], [([1 / 12] * 12, [2.0 * k for k in range(12)], [0.2] * 12),
+                                          ([1 / 12] * 12, [2.0 * k + 1 for k in range(12)], [0.2] * 12)]), 23),
+    "a spike of width 1e-10": (other.Problem([0.5, 0.5], [
+        ([0.999, 0.001], [0.0, 1.2345678], [1.0, 1e-10]), one(0.1, 1.0)]), 3),
+    "a spike far from all": (other.Problem([0.5, 0.5], [
+        ([1 - 1e-9, 1e-9], [0.0, 1e6], [1.0, 1e-10]), ([0.5, 0.5], [0.1, 3.0], [1.0, 2.0])]), 4),
+    "sds 1 and 1 + 1e-10": (other.Problem([0.5, 0.5], [one(0.0, 1.0), one(1.0, 1 + 1e-10)]), 2),
+    "the same with a third term": (other.Problem([0.5, 0.5], [
+        ([0.75, 0.25], [0.0, 0.5], [1.0, 0.5]), one(1.0, 1 + 1e-10)]), 2),
+    "levels at 1e9": (other.Problem([0.5, 0.5], [
+        ([0.5, 0.5], [1e9, 1e9 + 3], [1.0, 0.5]), ([0.3, 0.7], [1e9 + 1, 1e9 - 2], [0.7, 1.5])]), 4),
+    "far scales": (other.Problem([0.5, 0.5], [one(0.0, 1e-6), ([0.5, 0.5], [0.0, 1e3], [1e2, 1e-6])]), 2),
+    "close pairs": (other.Problem([0.5, 0.5], [one(0.0, 1.0), ([0.5, 0.5], [-1.0, 1.0], [1e-4, 1e-4])]), 4),
+    "equal densities": (other.Problem([0.5, 0.5], [([0.5, 0.5], [0.0, 1.0], [1.0, 2.0])] * 2), 0),
+    "equal densities, other priors": (other.Problem([0.3, 0.7], [([0.5, 0.5], [0.0, 1.0], [1.0, 2.0])] * 2), 0),
+    "a prior of 0": (other.Problem([0.5, 0.0, 0.5], [one(0.0, 1.0), one(0.5, 1e-3), one(1.0, 2.0)]), 2),
+    "priors of 1e-300": (other.Problem([1e-300, 1.0], [one(5.0, 1.0), one(0.0, 1.0)]), 1),
+    "five states": (other.Problem([0.2] * 5, [one(float(k), 0.1 + 0.05 * k) for k in range(5)]), 8),
+    "costs of three states": (other.Problem([0.2, 0.5, 0.3], [
+        ([0.9, 0.1], [0.0, 1.0], [0.5, 3.0]), ([0.5, 0.5], [1.0, 2.5], [0.3, 0.2]), one(4.0, 1.0)],
+        np.array([[0.0, 1.0, 40.0], [3.0, 0.0, 1.0], [1.0, 7.0, 0.0], [0.4, 0.4, 0.4]])), None),
+}
+
+
+@pytest.mark.parametrize("name", HARD)
+def test_hard_cases(name):
+    problem, count = HARD[name]
+    found = assert_found(problem)
+    assert count is None or found == count == len(problem.rule().levels)
+
+
+@pytest.mark.parametrize("excess, count", [(1e-3, 2), (1e-9, 2), (-1e-9, 0), (-1e-3, 0)])
+def test_pairs_that_nearly_touch(excess, count):
+    """A wide and a narrow Gaussian whose peaks differ by a factor of 1 + excess."""
+    prior = (1 + excess) / (3 + 1 + excess)
+    problem = other.Problem([1 - prior, prior], [one(0.0, 3.0), one(0.0, 1.0)])
+    assert assert_found(problem) == count
+
+
+@pytest.mark.parametrize("family, power", [(lm.gaussian, 2), (lm.laplace, 1)])
+def test_scales_far_apart_keep_all_digits(family, power):
+    """Around one centre: x^n / n (s^-n - S^-n) = log(S / s), at 50 digits. The slope there is steep: the roots lose a
+    few units in the last place, nothing more."""
+    near, far = 1e-9, 50.0
+    spike, flat, elsewhere = family(0.0, near), family(0.0, far), family(1e6, 1.0)
+    alone = lm.States({"spike": spike, "flat": flat}), lm.States({"flat": flat, "spike": spike})
+    within = [lm.States({"spike": lm.mixture([1, share], [spike, elsewhere]),
+                         "flat": lm.mixture([1, 1e-17 - share], [flat, elsewhere])}) for share in (0.0, 1e-17)]
+    found = [lm.bayes(states).levels for states in (*alone, *within)]
+    with mpmath.workdps(50):
+        s, t = mpmath.mpf(near), mpmath.mpf(far)
+        level = float((power * mpmath.log(t / s) / (s**-power - t**-power)) ** (mpmath.mpf(1) / power))
+    for levels in found:
+        assert levels[np.abs(levels) < 1].tolist() == pytest.approx([-level, level], rel=4e-15)
