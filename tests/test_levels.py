@@ -11,7 +11,7 @@ import limen as lm
 
 
 def assert_found(problem):
-    """Each level within 1e-12 of itself, or within the rounding of the log densities over the slope of the gap."""
+    """Each level within 4 units in the last place, and the rounding of the log densities over the slope of the gap."""
     missed, invented, count, agree = other.compare(problem)
     assert (missed, invented, agree) == ([], [], True)
     return count
@@ -47,6 +47,8 @@ HARD = {
     "levels at 1e9": (other.Problem([0.5, 0.5], [
         ([0.5, 0.5], [1e9, 1e9 + 3], [1.0, 0.5]), ([0.3, 0.7], [1e9 + 1, 1e9 - 2], [0.7, 1.5])]), 4),
     "far scales": (other.Problem([0.5, 0.5], [one(0.0, 1e-6), ([0.5, 0.5], [0.0, 1e3], [1e2, 1e-6])]), 2),
+    "narrow beside wide": (other.Problem([0.5, 0.5], [   # distances to the far mean must not enter the near levels
+        ([0.9, 0.1], [1.0, 30.0], [1e-6, 2.0]), ([0.5, 0.5], [-30.0, 40.0], [20.0, 1.0])]), 4),
     "close pairs": (other.Problem([0.5, 0.5], [one(0.0, 1.0), ([0.5, 0.5], [-1.0, 1.0], [1e-4, 1e-4])]), 4),
     "equal densities": (other.Problem([0.5, 0.5], [([0.5, 0.5], [0.0, 1.0], [1.0, 2.0])] * 2), 0),
     "equal densities, other priors": (other.Problem([0.3, 0.7], [([0.5, 0.5], [0.0, 1.0], [1.0, 2.0])] * 2), 0),

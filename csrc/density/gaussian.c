@@ -75,9 +75,11 @@ static lm_range score_range(const lm_term *term, double low, double high)
 /* log f_a - log f_b is a quadratic, its slope a line. In t = x - m_b, with d = m_a - m_b:
  *   y_b - y_a = (t (s_a - s_b) + s_b d) / (s_a s_b),   y_b + y_a likewise with the other signs,
  *   slope = (t (s_a - s_b)(s_a + s_b) + s_b^2 d) / (s_a s_b)^2,
- * products of differences of the parameters, so nothing cancels that the parameters do not cancel. */
+ * products of differences of the parameters, so nothing cancels that the parameters do not cancel. Where the scales
+ * are unlike, y_a and y_b themselves are better: t is large against x - m_a when b is wide and far. */
 typedef struct {
-    double constant, near, far, lead, tilt, sum, apart, product;
+    double constant, near, far, lead, tilt, sum, apart, product, mean_a, mean_b, sd_a, sd_b;
+    bool unlike;
 } quadratic;
 
 static quadratic prepare(const lm_term *a, const lm_term *b)
@@ -92,36 +94,51 @@ static quadratic prepare(const lm_term *a, const lm_term *b)
         .tilt = apart / sa / sa,
         .apart = apart,
         .product = sa * sb,
+        .mean_a = a->shift,
+        .mean_b = b->shift,
+        .sd_a = sa,
+        .sd_b = sb,
+        .unlike = sa > 2 * sb || sb > 2 * sa,
     };
 }
 
-static double ratio_at(const quadratic *q, double t)
+static double ratio_at(const quadratic *q, double x)
 {
+    double t = x - q->mean_b;
+    if (q->unlike) {
+        double ya = (x - q->mean_a) / q->sd_a, yb = t / q->sd_b, rise = 0.5 * (yb - ya) * (yb + ya);
+        if (isfinite(rise))
+            return q->constant + rise;
+    }
     double less = (t * q->near + q->far) / q->product, more = (t * q->sum - q->far) / q->product;
     double rise = 0.5 * less * more;
     return less == 0 ? q->constant : q->constant + rise;
 }
 
-static double slope_at(const quadratic *q, double t)
+static double slope_at(const quadratic *q, double x)
 {
-    return q->lead == 0 ? q->tilt : t * q->lead + q->tilt;
+    if (q->unlike) {
+        double slope = (x - q->mean_b) / q->sd_b / q->sd_b - (x - q->mean_a) / q->sd_a / q->sd_a;
+        if (isfinite(slope))
+            return slope;
+    }
+    return q->lead == 0 ? q->tilt : (x - q->mean_b) * q->lead + q->tilt;
 }
 
 static bool ratio(const lm_term *a, const lm_term *b, double low, double high, lm_range *value, lm_range *slope)
 {
     quadratic q = prepare(a, b);
-    double first = low - b->shift, last = high - b->shift;
-    double at_low = ratio_at(&q, first), s_low = slope_at(&q, first);
+    double at_low = ratio_at(&q, low), s_low = slope_at(&q, low);
     if (low == high) {
         *value = (lm_range){at_low, at_low};
         *slope = (lm_range){s_low, s_low};
         return true;
     }
-    double at_high = ratio_at(&q, last), s_high = slope_at(&q, last);
+    double at_high = ratio_at(&q, high), s_high = slope_at(&q, high);
     *value = (lm_range){fmin(at_low, at_high), fmax(at_low, at_high)};
     *slope = (lm_range){fmin(s_low, s_high), fmax(s_low, s_high)};
-    if (slope->low < 0 && slope->high > 0) { /* the vertex is inside */
-        double vertex = ratio_at(&q, -q.tilt / q.lead);
+    if (slope->low < 0 && slope->high > 0) { /* the vertex is inside; its height is free of x */
+        double vertex = q.constant - 0.5 * (q.apart / q.near) * (q.apart / q.sum);
         value->low = fmin(value->low, vertex);
         value->high = fmax(value->high, vertex);
     }

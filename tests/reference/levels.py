@@ -175,7 +175,7 @@ class Gap:
                     break
             assert (slope > 0) == rises and abs(x - exact(start)) <= 1e-12 * abs(x) + abs(noise / slope), \
                 "mpmath does not confirm a root of the extended search"
-            return float(x), float(max(1e-12 * abs(x), noise / abs(slope)))
+            return float(x), float(4 * EPS * abs(x) + noise / abs(slope))
 
 
 def exact(x):
