@@ -91,3 +91,42 @@ def test_scales_far_apart_keep_all_digits(family, power):
         level = float((power * mpmath.log(t / s) / (s**-power - t**-power)) ** (mpmath.mpf(1) / power))
     for levels in found:
         assert levels[np.abs(levels) < 1].tolist() == pytest.approx([-level, level], rel=4e-15)
+
+
+def test_equal_laws_leave_no_gap_to_search():
+    """Equal states tie everywhere, and the lower index decides; a law that two states share drops out of their gap."""
+    law = lm.mixture([0.3, 0.7], [lm.gaussian(0.0, 1.0), lm.laplace(1.0, 2.0)])
+    rule = lm.bayes(lm.States({"a": law, "b": law}))
+    assert (rule.levels.tolist(), rule.decisions.tolist(), rule.search) == ([], [0], "exhaustive")
+    dark = lm.gaussian(0.0, 1e3)     # 0.5 * 0.6 = 0.3 on both sides, but for its rounding
+    low, high = lm.gaussian(-1.0, 0.1), lm.gaussian(2.0, 0.1)
+    rule = lm.bayes(lm.States({"a": lm.mixture([0.6, 0.4], [dark, low]), "b": lm.mixture([0.4, 0.6], [high, dark])}))
+    assert rule.levels.tolist() == pytest.approx([0.5], rel=1e-15)
+    assert rule.search == "exhaustive"
+
+
+@pytest.mark.parametrize("apart", [3.0, 12.0, 37.7, 75.5, 150.0, 271.3])
+@pytest.mark.parametrize("sd, prior", [(1.0, 0.5), (0.6, 1e-6), (1.7, 0.99)])
+def test_error_rates_down_to_1e_minus_4000(apart, sd, prior):
+    """log10 of the error rate, and of each entry, of the rule as found: its tails at 50 digits, to 1e-10."""
+    laws = {"low": lm.gaussian(0.25, 1.0), "high": lm.gaussian(0.25 + apart, sd)}
+    states = lm.States(laws, priors=[prior, 1 - prior])
+    rule = lm.bayes(states)
+    assessed = rule.assess(states)
+    with mpmath.workdps(50):
+        edges = [-mpmath.inf, *map(mpmath.mpf, rule.levels.tolist()), mpmath.inf]
+
+        def log10_probability(decision, mean, scale):
+            total = mpmath.mpf(0)
+            for low, high, decided in zip(edges, edges[1:], rule.decisions):
+                if decided == decision:     # the difference of the smaller tails
+                    a, b = ((edge - mpmath.mpf(mean)) / mpmath.mpf(scale) / mpmath.sqrt(2) for edge in (low, high))
+                    a, b = (-b, -a) if b < 0 else (a, b)
+                    total += (mpmath.erfc(a) - mpmath.erfc(b)) / 2
+            return mpmath.log10(total)
+
+        wanted = [[log10_probability(d, m, s) for m, s in ((0.25, 1.0), (0.25 + apart, sd))] for d in (0, 1)]
+        rate = mpmath.log10(mpmath.mpf(prior) * 10 ** wanted[1][0] + (1 - mpmath.mpf(prior)) * 10 ** wanted[0][1])
+    assert assessed.log10_error_rate == pytest.approx(float(rate), abs=1e-10)
+    np.testing.assert_allclose(assessed.log10_transition, np.array(wanted, float), atol=1e-10, rtol=0)
+    assert (apart, sd, prior) != (271.3, 1.0, 0.5) or rate < -3990

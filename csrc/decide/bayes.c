@@ -1,6 +1,7 @@
 /* The rule of least prior-weighted cost: where each pair of decisions changes over, and who is best in each cell. */
 #include <float.h>
 #include <math.h>
+#include <string.h>
 
 #include "../numeric/fault.h"
 #include "../numeric/logspace.h"
@@ -43,6 +44,34 @@ static lm_gap_term gap_term(const lm_term *term, double coefficient)
     return t;
 }
 
+/* Whether two terms follow one law, whatever their weights. */
+static bool same_law(const lm_term *a, const lm_term *b)
+{
+    return a->shift == b->shift && a->scale == b->scale && a->family == b->family && a->data == b->data &&
+           memcmp(a->shape, b->shape, sizeof a->shape) == 0 &&
+           memcmp(a->constant, b->constant, sizeof a->constant) == 0;
+}
+
+/* Adds a term; one law on both sides of the gap is one term with the difference of the weights, or none where they are
+ * alike to within their rounding. Left on both sides, it would hide the gap below its own rounding. */
+static void add_term(lm_gap *gap, lm_gap_term added)
+{
+    for (size_t k = 0; k < gap->count; k++) {
+        lm_gap_term *t = &gap->term[k];
+        double here = t->term.log_weight, there = added.term.log_weight;
+        if (t->positive == added.positive || !same_law(&t->term, &added.term))
+            continue;
+        if (fabs(here - there) <= 8 * DBL_EPSILON * fmax(1, fmax(fabs(here), fabs(there)))) {
+            *t = gap->term[--gap->count];
+            return;
+        }
+        t->term.log_weight = here > there ? lm_log_sub(here, there) : lm_log_sub(there, here);
+        t->positive = here > there ? t->positive : added.positive;
+        return;
+    }
+    gap->term[gap->count++] = added;
+}
+
 /* Coefficients of the gap by which decision e costs more than d. */
 static void fill_pair(problem *p, size_t d, size_t e)
 {
@@ -51,7 +80,7 @@ static void fill_pair(problem *p, size_t d, size_t e)
         double coefficient = (cost(p, e, i) - cost(p, d, i)) * p->prior[i];
         for (size_t t = 0; t < p->density[i]->count && coefficient != 0; t++)
             if (!is_atom(&p->density[i]->term[t]))
-                p->pair.term[p->pair.count++] = gap_term(&p->density[i]->term[t], coefficient);
+                add_term(&p->pair, gap_term(&p->density[i]->term[t], coefficient));
     }
 }
 
