@@ -40,6 +40,18 @@ def poisson(x, mean):
     return mass, *(mpmath.gammainc(x + 1, *edges, regularized=True) for edges in ((mean, mpmath.inf), (0, mean)))
 
 
+def student_t(x, loc, scale, dof):
+    z, half = (x - loc) / scale, mpmath.mpf(1) / 2
+    peak = mpmath.gamma((dof + 1) / 2) / mpmath.gamma(dof / 2) / mpmath.sqrt(mpmath.pi * dof)
+    tail = mpmath.betainc(dof / 2, half, 0, dof / (dof + z * z), regularized=True) / 2
+    below, above = (1 - tail, tail) if z > 0 else (tail, 1 - tail)
+    return peak / scale * (1 + z * z / dof) ** (-(dof + 1) / 2), below, above
+
+
+def cauchy(x, loc, scale):
+    return student_t(x, loc, scale, mpmath.mpf(1))
+
+
 def gaussian(x, mean, sd):
     z = (x - mean) / sd
     return mpmath.npdf(x, mean, sd), mpmath.erfc(-z / mpmath.sqrt(2)) / 2, mpmath.erfc(z / mpmath.sqrt(2)) / 2
@@ -48,6 +60,11 @@ def gaussian(x, mean, sd):
 ROWS = [
     (lm.gaussian, gaussian, (0.385, 1.7), [-60.0, -3.1, 0.1, 0.385, 2.6, 61.3]),
     (lm.laplace, laplace, (0.385, 1.7), [-1900.0, -3.1, 0.3, 0.385, 0.4, 2.6, 1900.5]),
+    (lm.student_t, student_t, (0.385, 1.7, 0.5), [-1e4, -3.1, 0.3, 0.385, 0.4, 2.6, 1e200]),
+    (lm.student_t, student_t, (0.385, 1.7, 4.5), [-1e4, -3.1, 0.3, 2.6, 61.3, 1e30]),
+    (lm.student_t, student_t, (0.385, 1.7, 30.0), [-1e4, -3.1, 0.3, 2.6, 61.3]),
+    (lm.student_t, student_t, (0.385, 1.7, 1e6), [-60.0, -3.1, 0.3, 3.32, 3.34, 61.3]),
+    (lm.cauchy, cauchy, (0.385, 1.7), [-1e4, -3.1, 0.3, 2.6, 1e200]),
     (lm.uniform, uniform, (-1.25, 3.5), [-1.3, -1.25, -1.0, 0.1, 3.4375, 3.5, 3.7]),
     (lm.exponential, exponential, (1.7, -0.25), [-0.3, -0.25, -0.2499, 0.7, 3.3, 1900.0]),
     (lm.point, point, (1.3,), [-1.0, 1.2, 1.3, 1.4]),
@@ -106,3 +123,32 @@ def test_levels_in_closed_form(a, b, levels):
     rule = lm.bayes(lm.States({"a": a, "b": b}))
     assert rule.levels.tolist() == pytest.approx(levels, rel=1e-14)
     assert rule.search.startswith("exhaustive")
+
+
+def draw_density(rng):
+    """A law of two tails with any parameters, or a mixture of such laws."""
+    def one():
+        loc, scale = 3 * rng.normal(), 10 ** rng.uniform(-2, 1)
+        kinds = (lambda: lm.gaussian(loc, scale), lambda: lm.laplace(loc, scale), lambda: lm.cauchy(loc, scale),
+                 lambda: lm.student_t(loc, scale, 3.0), lambda: lm.student_t(loc, scale, 10 ** rng.uniform(-0.3, 2)))
+        return kinds[rng.integers(len(kinds))]()
+
+    if rng.integers(2):
+        return one()
+    weights = rng.dirichlet(np.ones(rng.integers(2, 4)))
+    return lm.mixture(weights / weights.sum(), [one() for _ in weights])
+
+
+@pytest.mark.parametrize("seed", range(40))
+def test_decisions_of_mixed_families_are_those_of_their_densities(seed):
+    """At readings from -1e130 to 1e130, wherever the two log densities differ by more than their own rounding."""
+    rng = np.random.default_rng(seed)
+    x = np.unique(np.concatenate([np.sinh(np.linspace(-300, 300, 8001)), np.linspace(-40, 40, 8001)]))
+    for _ in range(5):
+        a, b, prior = draw_density(rng), draw_density(rng), rng.uniform(0.05, 0.95)
+        rule = lm.bayes(lm.States({"a": a, "b": b}, priors=[prior, 1 - prior]))
+        of_a, of_b = a.logpdf(x), b.logpdf(x)
+        gap, rounding = np.log(prior / (1 - prior)) + of_a - of_b, 1e-14 * (1 + np.abs(of_a) + np.abs(of_b))
+        sure = np.abs(gap) > rounding
+        assert (rule.decide(x)[sure] == (gap[sure] < 0)).all(), (a, b, prior)
+        assert rule.search.startswith("exhaustive"), (a, b, prior)

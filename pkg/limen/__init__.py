@@ -2,7 +2,20 @@
 
 from . import plot
 from ._core import __version__
-from .densities import Density, density, exponential, from_readings, gaussian, laplace, mixture, point, poisson, uniform
+from .densities import (
+    Density,
+    cauchy,
+    density,
+    exponential,
+    from_readings,
+    gaussian,
+    laplace,
+    mixture,
+    point,
+    poisson,
+    student_t,
+    uniform,
+)
 from .evidence import error_bounds
 from .reports import report
 from .rules import Assessment, Rule, bayes, load, rule
@@ -22,6 +35,7 @@ __all__ = [
     "__version__",
     "bayes",
     "build_info",
+    "cauchy",
     "decide",
     "density",
     "error_bounds",
@@ -37,6 +51,7 @@ __all__ = [
     "report",
     "rule",
     "stream",
+    "student_t",
     "tally_stream",
     "uniform",
 ]

@@ -10,8 +10,8 @@ import numpy as np
 
 from . import _core
 
-__all__ = ["Density", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture", "point",
-           "poisson", "uniform"]
+__all__ = ["Density", "cauchy", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture",
+           "point", "poisson", "student_t", "uniform"]
 
 _FORMAT, _VERSION = "limen density", 1
 
@@ -127,6 +127,60 @@ def laplace(loc: float, scale: float) -> Density:
     0.5
     """
     return Density._make("laplace", loc, scale)
+
+
+def student_t(loc: float, scale: float, dof: float) -> Density:
+    """Student's t: a bell with power tails, for noise with outliers.
+
+    Parameters
+    ----------
+    loc : float
+        Median and mode; the mean where ``dof > 1``.
+    scale : float
+        Above 0; ``scale ** 2 * dof / (dof - 2)`` is the variance where ``dof > 2``.
+    dof : float
+        Degrees of freedom, above 0; far out the density falls like ``abs(x) ** -(dof + 1)``.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Notes
+    -----
+    Tails after M. Abramowitz, I. A. Stegun, Handbook of Mathematical Functions, 1964, 26.7.
+
+    Examples
+    --------
+    >>> d = lm.student_t(0.0, 1.0, 4)
+    >>> round(d.isf(0.025), 4), d.var        # the tabulated quantile
+    (2.7764, 2.0)
+    """
+    return Density._make("student_t", loc, scale, dof)
+
+
+def cauchy(loc: float, scale: float) -> Density:
+    """The Cauchy law, Student's t of one degree of freedom; it has no mean.
+
+    Parameters
+    ----------
+    loc : float
+        Median and mode.
+    scale : float
+        Half the distance between the quartiles, above 0.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Examples
+    --------
+    >>> d = lm.cauchy(2.0, 0.5)
+    >>> round(d.ppf(0.75), 12), d.mean
+    (2.5, nan)
+    """
+    return Density._make("cauchy", loc, scale)
 
 
 def uniform(low: float, high: float) -> Density:
