@@ -92,7 +92,7 @@ struct lm_family {
 };
 
 /* The families: one line here, one file, one `const lm_family lm_family_<name>`. */
-#define LM_FAMILIES(X)                                                                                                  \
+#define LM_FAMILIES(X)                                                                                                 \
     X(gaussian) X(laplace) X(student_t) X(cauchy) X(uniform) X(exponential) X(poisson) X(point) X(from_readings)
 
 #define LM_DECLARE(name) extern const lm_family lm_family_##name;
