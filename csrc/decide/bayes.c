@@ -205,9 +205,9 @@ static lm_status find_levels(problem *p, lm_points *levels, lm_search *search)
     for (size_t d = 0; d < p->decisions; d++)
         for (size_t e = d + 1; e < p->decisions; e++) {
             fill_pair(p, d, e);
-            if (is_gaussian_pair(&p->pair)) {
-                double at[2];
-                size_t count = lm_gaussian_pair(&p->pair, at);
+            double at[2];
+            size_t count;
+            if (is_gaussian_pair(&p->pair) && lm_gaussian_pair(&p->pair, at, &count)) {
                 for (size_t k = 0; k < count; k++)
                     LM_TRY(lm_points_add(levels, at[k]));
             } else if (p->pair.count > 0) {
@@ -243,24 +243,42 @@ static bool is_void(const problem *p, double x, lm_side side)
 
 static const size_t nobody = SIZE_MAX;
 
+/* A reading of the cell from low up to high, and the side from which to look at it. */
+static double reading_of_cell(const problem *p, double low, double high, lm_side *side)
+{
+    double x = low < high ? lm_gap_middle(&p->whole, low, high) : low;
+    bool within = x > low && x < high;
+    *side = within ? LM_AT : LM_FROM_RIGHT; /* the one reading of a cell between neighbouring doubles is its level */
+    return within ? x : low;
+}
+
 /* The decision of each cell between the levels; nobody where no state has density. */
 static void decide_cells(problem *p, const lm_points *levels, size_t decision[])
 {
     for (size_t k = 0; k <= levels->count; k++) {
         double low = k == 0 ? -DBL_MAX : levels->at[k - 1], high = k == levels->count ? DBL_MAX : levels->at[k];
-        double x = low < high ? lm_gap_middle(&p->whole, low, high) : low;
-        lm_side side = LM_AT;
-        if (!(x > low && x < high)) { /* the one reading of a cell between neighbouring doubles */
-            x = low;
-            side = LM_FROM_RIGHT;
-        }
+        lm_side side;
+        double x = reading_of_cell(p, low, high, &side);
         decision[k] = is_void(p, x, side) ? nobody : best_inside(p, x, side);
     }
 }
 
+/* Whether two decisions differ at x by more than the logarithms there are rounded. */
+static bool differ_surely(problem *p, size_t d, size_t e, double x, lm_side side)
+{
+    lm_gap *gap = &p->pair;
+    fill_pair(p, d, e);
+    for (size_t i = 0; i < gap->count; i++)
+        gap->bound[i].at_middle = -INFINITY;
+    double h = lm_gap_value(gap, x, side, NULL), top[2] = {-INFINITY, -INFINITY};
+    for (size_t i = 0; i < gap->count; i++)
+        top[gap->term[i].positive] = fmax(top[gap->term[i].positive], gap->bound[i].at_middle);
+    return fabs(h) > 8 * DBL_EPSILON * (1 + fabs(top[0]) + fabs(top[1])) || isinf(h);
+}
+
 /* Merges cells of one decision, divides voids between their neighbours, and drops cells as narrow as the rounding of a
  * level between two cells of one decision (a touch). Works in place; decision keeps count + 1 entries. */
-static void merge_cells(lm_points *levels, size_t decision[], lm_search *search)
+static void merge_cells(problem *p, lm_points *levels, size_t decision[], lm_search *search)
 {
     size_t n = levels->count + 1, kept = 0;
     for (size_t k = 0; k < n; k++) { /* voids: the nearer edge's decision, divided at the middle */
@@ -285,8 +303,12 @@ static void merge_cells(lm_points *levels, size_t decision[], lm_search *search)
         bool narrow = k + 1 < n && decision[k + 1] == decision[kept] &&
                       at[k] - low <= 4 * DBL_EPSILON * fmax(fabs(low), fabs(at[k]));
         if (narrow) {
-            search->touches++;
-            continue;
+            lm_side side;
+            double x = reading_of_cell(p, low, at[k], &side);
+            if (!differ_surely(p, decision[kept], decision[k], x, side)) {
+                search->touches++;
+                continue;
+            }
         }
         at[kept] = low;
         decision[++kept] = decision[k];
@@ -430,7 +452,7 @@ static lm_status solve(problem *p, lm_rule *out)
         }
         if (status == LM_OK) {
             decide_cells(p, &levels, decision);
-            merge_cells(&levels, decision, &search);
+            merge_cells(p, &levels, decision, &search);
             if (p->atoms)
                 status = insert_masses(p, &levels, &decision);
         }

@@ -55,6 +55,18 @@ static double ulp(double x)
     return nextafter(fabs(x), INFINITY) - fabs(x);
 }
 
+/* The first double of the new sign, between neighbours of a root of which low has the old sign and high the new: so a
+ * law narrower than the spacing of doubles keeps the one reading it has. */
+static double first_changed(const lm_gap *gap, double low, double high, bool at_low)
+{
+    for (double x; x = low + 0.5 * (high - low), x > low && x < high;)
+        if (holds(lm_gap_value(gap, x, LM_AT, NULL)) == at_low)
+            low = x;
+        else
+            high = x;
+    return high;
+}
+
 /* The change of sign in (low, high], of which there is one: Newton on h, kept inside the bracket, halving in u where a
  * step leaves it or stalls. Ends when the step is below the spacing of doubles and the sign is seen to change around.
  */
@@ -74,7 +86,7 @@ static double refine(const lm_gap *gap, double low, double high, bool at_low)
             bool left_same = left == low || holds(lm_gap_value(gap, left, LM_AT, NULL)) == at_low;
             bool right_same = right != high && holds(lm_gap_value(gap, right, LM_AT, NULL)) == at_low;
             if (left_same && !right_same)
-                return fmin(fmax(next, left), right);
+                return first_changed(gap, left, right, at_low);
             low = right_same ? right : low;
             high = left_same ? high : left;
             x = lm_gap_middle(gap, low, high);

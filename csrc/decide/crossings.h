@@ -19,8 +19,8 @@ void lm_points_free(lm_points *points);
  * the same terms live; what happens at support edges is the caller's. breaks: support edges and kinks, sorted. */
 LM_MUST_USE lm_status lm_gap_crossings(lm_gap *gap, const lm_points *breaks, lm_points *levels, lm_search *search);
 
-/* Two Gaussian terms of opposite sign: the roots of a quadratic, in closed form without cancellation; writes at most 2,
- * ascending, and returns their number. */
-size_t lm_gaussian_pair(const lm_gap *gap, double levels[2]);
+/* Two Gaussian terms of opposite sign: the roots of a quadratic, in closed form without cancellation, ascending. False
+ * where the two lie only some doubles apart: then the search must look at each. */
+bool lm_gaussian_pair(const lm_gap *gap, double levels[2], size_t *count);
 
 #endif

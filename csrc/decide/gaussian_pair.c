@@ -18,8 +18,9 @@ static double polish(const lm_gap *gap, double x)
     return isfinite(next) && fabs(next - x) < 1e-3 * (gap->scale + fabs(x)) ? next : x;
 }
 
-size_t lm_gaussian_pair(const lm_gap *gap, double levels[2])
+bool lm_gaussian_pair(const lm_gap *gap, double levels[2], size_t *count)
 {
+    *count = 0;
     const lm_term *one = &gap->term[0].term, *two = &gap->term[1].term;
     double s1 = fabs(one->scale), s2 = fabs(two->scale), d = two->shift - one->shift;
     double unlike = (s1 - s2) / s2 * ((s1 + s2) / s2); /* all lengths in units of s2 */
@@ -28,31 +29,27 @@ size_t lm_gaussian_pair(const lm_gap *gap, double levels[2])
     double discriminant = apart * apart - 2 * log_ratio * unlike;
     if (unlike == 0) {
         if (apart == 0)
-            return 0;
+            return true;
         double x = one->shift + s2 * (0.5 * apart + log_ratio * r * r / apart);
-        if (!isfinite(x))
-            return 0;
-        levels[0] = polish(gap, x);
-        return 1;
+        if (isfinite(x))
+            levels[(*count)++] = polish(gap, x);
+        return true;
     }
     if (!(discriminant > 0))
-        return 0;
+        return true;
     double root = r * sqrt(discriminant), b = apart * r * r;
     double q = b + copysign(root, b), c = r * r * (apart * apart + 2 * log_ratio);
-    size_t count = 0;
     double roots[2] = {one->shift + s2 * (q / unlike), one->shift + s2 * (c / q)};
     if (roots[0] > roots[1]) {
         double swap = roots[0];
         roots[0] = roots[1];
         roots[1] = swap;
     }
+    /* Two roots with few doubles between them: the search looks at each of those. */
+    if (roots[1] - roots[0] <= 64 * DBL_EPSILON * fmax(fabs(roots[0]), fabs(roots[1])))
+        return false;
     for (int i = 0; i < 2; i++)
-        if (isfinite(roots[i])) {
-            double x = polish(gap, roots[i]);
-            if (count == 0 || x > levels[0])
-                levels[count++] = x;
-            else
-                count--; /* a double root: the sign does not change */
-        }
-    return count;
+        if (isfinite(roots[i]))
+            levels[(*count)++] = polish(gap, roots[i]);
+    return true;
 }

@@ -149,7 +149,7 @@ class Gap:
         return []
 
     def roots(self):
-        """(root, error allowed) of each change of sign."""
+        """(first double at or above the root, error allowed) of each change of sign."""
         found = self.brackets()
         if not found:
             return []
@@ -175,7 +175,9 @@ class Gap:
                     break
             assert (slope > 0) == rises and abs(x - exact(start)) <= 1e-12 * abs(x) + abs(noise / slope), \
                 "mpmath does not confirm a root of the extended search"
-            return float(x), float(4 * EPS * abs(x) + noise / abs(slope))
+            level = float(x)
+            level = level if level >= x else np.nextafter(level, np.inf)
+            return float(level), float(4 * EPS * abs(x) + noise / abs(slope))
 
 
 def exact(x):
@@ -193,10 +195,15 @@ def levels(problem):
     """(levels, errors allowed, decisions) and the gaps of all pairs of decisions."""
     cost = problem.cost()
     gaps = {(d, e): Gap(problem, cost[e] - cost[d]) for d, e in itertools.combinations(range(len(cost)), 2)}
-    roots = sorted(root for gap in gaps.values() if len(gap.mean) and not gap.one_signed() for root in gap.roots())
+    roots = {}
+    for gap in gaps.values():
+        if len(gap.mean) and not gap.one_signed():
+            roots.update(gap.roots())     # of two roots between the same doubles, either will do
+    roots = sorted(roots.items())
     at = np.array([x for x, _ in roots])
-    if len(at):
-        middles = np.concatenate([[at[0] - 1 - abs(at[0])], (at[1:] + at[:-1]) / 2, [at[-1] + 1 + abs(at[-1])]])
+    if len(at):     # a reading of each interval
+        middles = np.clip((at[1:] + at[:-1]) / 2, at[:-1], np.nextafter(at[1:], -np.inf))
+        middles = np.concatenate([[at[0] - 1 - abs(at[0])], middles, [at[-1] + 1 + abs(at[-1])]])
     else:
         middles = np.zeros(1)
     best = np.zeros(len(middles), int)
@@ -259,14 +266,38 @@ def random_problem(rng):
     return Problem((priors / priors.sum()).tolist(), mixtures, costs)
 
 
+def awkward_problem(rng):
+    """Shared means, sds equal or a hair apart, combs, spikes, far origins, tiny and huge units, priors of 1e-200."""
+    count = int(rng.choice([2, 2, 2, 3]))
+    unit, origin = 10 ** rng.choice([0.0, 0.0, -30.0, 30.0, -100.0]), rng.choice([0.0, 0.0, 1.0, -1e6, 1e9])
+    means = rng.normal(size=4) * 10 ** rng.uniform(-2, 1) + origin
+    sds = 10 ** rng.uniform(-1, 1, 3)
+    sds = np.concatenate([sds, sds * (1 + 10 ** rng.uniform(-12, -2, 3)), 10 ** rng.uniform(-10, -3, 2)])
+    mixtures = []
+    for k in range(count):
+        if rng.random() < 0.15:
+            n = int(rng.integers(3, 13))
+            step, weights = 10 ** rng.uniform(-1, 1), np.ones(n)
+            laws = origin + step * (np.arange(n) + k / count), np.full(n, step * 10 ** rng.uniform(-2, 0.2))
+        else:
+            n = int(rng.integers(1, 5))
+            weights = 10 ** rng.uniform(*rng.choice([(-9, 0), (-0.3, 0), (-60, 0)]), n)
+            laws = rng.choice(means, n), rng.choice(sds, n)
+        mixtures.append(((weights / weights.sum()).tolist(), *((law * unit).tolist() for law in laws)))
+    priors = 10 ** rng.uniform(*rng.choice([(-2, 0), (0, 0), (-200, 0)]), count)
+    return Problem((priors / priors.sum()).tolist(), mixtures)
+
+
 def main():
     parse = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parse.add_argument("--count", type=int, default=1000, help="how many problems")
     parse.add_argument("--first", type=int, default=0, help="seed of the first; each problem has its own")
+    parse.add_argument("--awkward", action="store_true", help="hard cases made on purpose")
     asked = parse.parse_args()
+    make = awkward_problem if asked.awkward else random_problem
     began, spent, all_levels, missed, invented, unlike, words = time.perf_counter(), 0.0, 0, 0, 0, 0, {}
     for seed in range(asked.first, asked.first + asked.count):
-        problem = random_problem(np.random.default_rng(seed))
+        problem = make(np.random.default_rng(seed))
         lost, extra, count, agree = compare(problem)
         start = time.perf_counter()
         search = problem.rule().search
