@@ -111,19 +111,37 @@ enum { DEPTH = 1200, SAMPLES = 512 };
  * counted as unresolved. */
 enum { MOST_PIECES = 400000 };
 
-static lm_status settle_monotone(const lm_gap *gap, piece p, lm_points *levels)
+/* The sign of h as far as the search has come. Pieces meet at readings where h may be below its rounding, and bounds on
+ * two sides of such a place can settle for two signs: the change is then at the meeting itself. */
+typedef enum { UNKNOWN, HELD, LOST } sign;
+
+static sign sign_of(double h)
 {
-    double first = lm_gap_value(gap, p.low, LM_FROM_RIGHT, NULL), last = lm_gap_value(gap, p.high, LM_FROM_LEFT, NULL);
-    if (holds(first) == holds(last))
-        return LM_OK;
-    return lm_points_add(levels, refine(gap, p.low, p.high, holds(first)));
+    return holds(h) ? HELD : LOST;
+}
+
+static lm_status settle(sign *so_far, piece p, sign first, sign last, lm_points *levels)
+{
+    if (*so_far != UNKNOWN && first != *so_far)
+        LM_TRY(lm_points_add(levels, p.low));
+    *so_far = last;
+    return LM_OK;
+}
+
+static lm_status settle_monotone(const lm_gap *gap, piece p, sign *so_far, lm_points *levels)
+{
+    sign first = sign_of(lm_gap_value(gap, p.low, LM_FROM_RIGHT, NULL));
+    sign last = sign_of(lm_gap_value(gap, p.high, LM_FROM_LEFT, NULL));
+    LM_TRY(settle(so_far, p, first, last, levels));
+    return first == last ? LM_OK : lm_points_add(levels, refine(gap, p.low, p.high, first == HELD));
 }
 
 /* Equal steps in a coordinate that is fine at both ends of the piece and near the centre. */
-static lm_status sample(const lm_gap *gap, piece p, lm_points *levels, lm_search *search)
+static lm_status sample(const lm_gap *gap, piece p, sign *so_far, lm_points *levels, lm_search *search)
 {
     double last = p.low;
     bool before = holds(lm_gap_value(gap, p.low, LM_FROM_RIGHT, NULL));
+    LM_TRY(settle(so_far, p, before ? HELD : LOST, UNKNOWN, levels));
     bool far = isinf(p.high - p.low) || p.high - p.low > 1e3 * gap->scale * SAMPLES;
     for (int i = 1; i <= SAMPLES; i++) {
         double part = (double)i / SAMPLES;
@@ -140,11 +158,13 @@ static lm_status sample(const lm_gap *gap, piece p, lm_points *levels, lm_search
         before = now;
         last = x;
     }
+    *so_far = before ? HELD : LOST;
     return LM_OK;
 }
 
 /* One stretch between neighbouring breaks. */
-static lm_status stretch(lm_gap *gap, double low, double high, lm_points *levels, lm_search *search, bool *sampled)
+static lm_status stretch(lm_gap *gap, double low, double high, sign *so_far, lm_points *levels, lm_search *search,
+                         bool *sampled)
 {
     piece stack[DEPTH];
     size_t depth = 0;
@@ -154,20 +174,25 @@ static lm_status stretch(lm_gap *gap, double low, double high, lm_points *levels
         search->pieces++;
         switch (lm_gap_judge(gap, p.low, p.high)) {
         case LM_GAP_VOID:
+            *so_far = UNKNOWN;
+            break;
         case LM_GAP_POSITIVE:
+            LM_TRY(settle(so_far, p, HELD, HELD, levels));
+            break;
         case LM_GAP_NEGATIVE:
+            LM_TRY(settle(so_far, p, LOST, LOST, levels));
             break;
         case LM_GAP_RISING:
         case LM_GAP_FALLING:
-            LM_TRY(settle_monotone(gap, p, levels));
+            LM_TRY(settle_monotone(gap, p, so_far, levels));
             break;
         case LM_GAP_TIED:
             search->touches++;
-            LM_TRY(settle_monotone(gap, p, levels));
+            LM_TRY(settle_monotone(gap, p, so_far, levels));
             break;
         case LM_GAP_BOUNDLESS:
             *sampled = true;
-            LM_TRY(sample(gap, p, levels, search));
+            LM_TRY(sample(gap, p, so_far, levels, search));
             break;
         case LM_GAP_OPEN: {
             double middle = lm_gap_middle(gap, p.low, p.high);
@@ -178,7 +203,7 @@ static lm_status stretch(lm_gap *gap, double low, double high, lm_points *levels
                     search->touches++;
                 else
                     search->unresolved++;
-                LM_TRY(settle_monotone(gap, p, levels));
+                LM_TRY(settle_monotone(gap, p, so_far, levels));
             } else {
                 stack[depth++] = (piece){middle, p.high};
                 stack[depth++] = (piece){p.low, middle};
@@ -193,20 +218,13 @@ static lm_status stretch(lm_gap *gap, double low, double high, lm_points *levels
 lm_status lm_gap_crossings(lm_gap *gap, const lm_points *breaks, lm_points *levels, lm_search *search)
 {
     bool sampled = false;
+    sign so_far = UNKNOWN;
     double low = -DBL_MAX;
     for (size_t i = 0; i <= breaks->count; i++) {
         double high = i < breaks->count ? breaks->at[i] : DBL_MAX;
         if (!(high > low))
             continue;
-        LM_TRY(stretch(gap, low, high, levels, search, &sampled));
-        /* The sides of a break may differ in sign although each is settled: at a jump, or a root on the break itself.
-         */
-        if (i < breaks->count) {
-            double left = lm_gap_value(gap, high, LM_FROM_LEFT, NULL),
-                   right = lm_gap_value(gap, high, LM_FROM_RIGHT, NULL);
-            if (holds(left) != holds(right))
-                LM_TRY(lm_points_add(levels, high));
-        }
+        LM_TRY(stretch(gap, low, high, &so_far, levels, search, &sampled));
         low = high;
     }
     search->sampled += sampled;
