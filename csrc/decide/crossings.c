@@ -215,14 +215,24 @@ static lm_status stretch(lm_gap *gap, double low, double high, sign *so_far, lm_
     return LM_OK;
 }
 
+/* The farthest reading at which y is a double for every term. Gaussians need none: their ratio is taken in x. */
+static double farthest(const lm_gap *gap)
+{
+    double least = 1;
+    for (size_t i = 0; i < gap->count; i++)
+        if (gap->term[i].term.family != &lm_family_gaussian)
+            least = fmin(least, fabs(gap->term[i].term.scale));
+    return least < 1 ? 0.25 * DBL_MAX * least : DBL_MAX;
+}
+
 lm_status lm_gap_crossings(lm_gap *gap, const lm_points *breaks, lm_points *levels, lm_search *search)
 {
     bool sampled = false;
     sign so_far = UNKNOWN;
-    double low = -DBL_MAX;
+    double limit = farthest(gap), low = -limit;
     for (size_t i = 0; i <= breaks->count; i++) {
-        double high = i < breaks->count ? breaks->at[i] : DBL_MAX;
-        if (!(high > low))
+        double high = i < breaks->count ? breaks->at[i] : limit;
+        if (!(high > low && high <= limit))
             continue;
         LM_TRY(stretch(gap, low, high, &so_far, levels, search, &sampled));
         low = high;

@@ -62,11 +62,12 @@ static bool lives(const lm_gap_term *t, double low, double high)
     return t->support.low <= low && t->support.high >= high;
 }
 
-/* y of a reading that lies inside the support, kept there, and finite, although shift and scale round. */
+/* y of a reading that lies inside the support, kept there although shift and scale round; never -0, whose inverse
+ * would have the wrong sign at the edge of a mirrored law. */
 static double inside(const lm_term *term, double x)
 {
     lm_range y = term->family->support(term);
-    return fmin(fmax((x - term->shift) / term->scale, fmax(y.low, -DBL_MAX)), fmin(y.high, DBL_MAX));
+    return fmin(fmax((x - term->shift) / term->scale, y.low), y.high) + 0.0;
 }
 
 static double log_value(const lm_gap_term *t, double x)

@@ -10,8 +10,8 @@ import numpy as np
 
 from . import _core
 
-__all__ = ["Density", "cauchy", "density", "exponential", "from_readings", "gaussian", "laplace", "mixture",
-           "point", "poisson", "student_t", "uniform"]
+__all__ = ["Density", "cauchy", "chi_square", "density", "exponential", "from_readings", "gamma", "gaussian", "laplace",
+           "mixture", "point", "poisson", "student_t", "uniform"]
 
 _FORMAT, _VERSION = "limen density", 1
 
@@ -42,6 +42,9 @@ class Density(_core.Density):
 
     def __sub__(self, shift: Any) -> Density:
         return self._moved(-shift, 1.0) if isinstance(shift, (int, float, np.number)) else NotImplemented
+
+    def __rsub__(self, shift: Any) -> Density:
+        return self._moved(shift, -1.0) if isinstance(shift, (int, float, np.number)) else NotImplemented
 
     def __mul__(self, scale: Any) -> Density:
         return self._moved(0.0, scale) if isinstance(scale, (int, float, np.number)) else NotImplemented
@@ -225,6 +228,56 @@ def exponential(scale: float, low: float = 0.0) -> Density:
     -10.0
     """
     return Density._make("exponential", scale, low)
+
+
+def gamma(shape: float, scale: float) -> Density:
+    """The gamma law: waiting times for several events, energies, squared noise.
+
+    Parameters
+    ----------
+    shape : float
+        Above 0; the mean is ``shape * scale``.
+    scale : float
+        Above 0, in the units of the readings.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Notes
+    -----
+    Tails after M. Abramowitz, I. A. Stegun, Handbook of Mathematical Functions, 1964, 6.5, in C. Loader's saddle-point
+    form. They take longer for larger shapes: some microseconds a reading at 1e6.
+
+    Examples
+    --------
+    >>> d = lm.gamma(3.0, 2.0) + 1.0
+    >>> d.mean, d.var
+    (7.0, 12.0)
+    """
+    return Density._make("gamma", shape, scale)
+
+
+def chi_square(dof: float) -> Density:
+    """The sum of `dof` squared standard normal variables: the gamma law of shape ``dof / 2`` and scale 2.
+
+    Parameters
+    ----------
+    dof : float
+        Degrees of freedom, above 0.
+
+    Raises
+    ------
+    ValueError
+        A parameter outside its domain.
+
+    Examples
+    --------
+    >>> round(lm.chi_square(4).isf(0.05), 4)        # the tabulated quantile
+    9.4877
+    """
+    return Density._make("chi_square", dof)
 
 
 def poisson(mean: float) -> Density:
