@@ -130,6 +130,17 @@ LM_API LM_MUST_USE lm_status lm_density_spline(const lm_spline_law *law, lm_dens
  * also for one that was moved. Cannot fail. */
 LM_API bool lm_density_spline_law(const lm_density *density, lm_spline_law *out);
 
+/* A caller's function: log densities at n readings inside the support, -inf where there is none. False, or a NaN among
+ * them, fails whatever asked. It must not change while the density lives, and is called from any thread that evaluates
+ * the density. */
+typedef bool (*lm_log_pdf_callback)(void *context, const double x[], double out[], size_t n);
+
+/* The law of such a function. Where its mass is, is searched for when it is made; it must integrate to 1 within 1e-6.
+ * release (NULL: none) is called once with context when the last owner goes, on failure too. No bounds are known of
+ * such a law, so levels are sought by sampling, and lm_search says how finely. */
+LM_API LM_MUST_USE lm_status lm_density_custom(lm_log_pdf_callback log_pdf, void *context, void (*release)(void *),
+                                               lm_range support, lm_density **out, lm_fault *fault);
+
 /* The table of families: names, and the name of each parameter (NULL past the last). */
 LM_API size_t lm_family_count(void);
 LM_API const char *lm_family_name(size_t family);

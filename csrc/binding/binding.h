@@ -16,7 +16,7 @@
 
 /* Each part is one file with one function that adds its types and functions to the module: 0, or -1 with an error set.
  * Registering a file is one line here. */
-#define LM_BINDING_PARTS(X) X(status) X(density) X(decide) X(evidence) X(slice) X(slice_passes) X(soft)
+#define LM_BINDING_PARTS(X) X(status) X(density) X(custom) X(decide) X(evidence) X(slice) X(slice_passes) X(soft)
 
 #define LM_PART(name) int lm_bind_##name(PyObject *module);
 LM_BINDING_PARTS(LM_PART)

@@ -220,12 +220,16 @@ static lm_status find_levels(problem *p, lm_points *levels, lm_search *search)
     return LM_OK;
 }
 
-static size_t best_inside(problem *p, double x, lm_side side)
+/* Also whether the densities could be told apart there. */
+static size_t best_inside(problem *p, double x, lm_side side, bool *told)
 {
     size_t best = 0;
+    *told = true;
     for (size_t e = 1; e < p->decisions; e++) {
         fill_pair(p, best, e);
-        if (lm_gap_value(&p->pair, x, side, NULL) < 0)
+        double h = lm_gap_value(&p->pair, x, side, NULL);
+        *told &= h != 0;
+        if (h < 0)
             best = e;
     }
     return best;
@@ -259,7 +263,14 @@ static void decide_cells(problem *p, const lm_points *levels, size_t decision[])
         double low = k == 0 ? -DBL_MAX : levels->at[k - 1], high = k == levels->count ? DBL_MAX : levels->at[k];
         lm_side side;
         double x = reading_of_cell(p, low, high, &side);
-        decision[k] = is_void(p, x, side) ? nobody : best_inside(p, x, side);
+        bool told = true;
+        decision[k] = is_void(p, x, side) ? nobody : best_inside(p, x, side, &told);
+        /* far out both may be too small for doubles: ask nearer the level */
+        for (int i = 0; !told && i < 16 && levels->count > 0 && (k == 0 || k == levels->count); i++) {
+            x = k == 0 ? lm_gap_middle(&p->whole, x, high) : lm_gap_middle(&p->whole, low, x);
+            if (x > low && x < high)
+                decision[k] = is_void(p, x, LM_AT) ? nobody : best_inside(p, x, LM_AT, &told);
+        }
     }
 }
 

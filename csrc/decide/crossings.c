@@ -136,12 +136,13 @@ static lm_status settle_monotone(const lm_gap *gap, piece p, sign *so_far, lm_po
     return first == last ? LM_OK : lm_points_add(levels, refine(gap, p.low, p.high, first == HELD));
 }
 
-/* Equal steps in a coordinate that is fine at both ends of the piece and near the centre. */
+/* Equal steps in a coordinate that is fine at both ends of the piece and near the centre. A sample that says nothing, a
+ * tie or two densities too small for doubles, counts with its neighbours. */
 static lm_status sample(const lm_gap *gap, piece p, sign *so_far, lm_points *levels, lm_search *search)
 {
-    double last = p.low;
-    bool before = holds(lm_gap_value(gap, p.low, LM_FROM_RIGHT, NULL));
-    LM_TRY(settle(so_far, p, before ? HELD : LOST, UNKNOWN, levels));
+    double last = p.low, first = lm_gap_value(gap, p.low, LM_FROM_RIGHT, NULL);
+    if (first != 0)
+        LM_TRY(settle(so_far, p, sign_of(first), sign_of(first), levels));
     bool far = isinf(p.high - p.low) || p.high - p.low > 1e3 * gap->scale * SAMPLES;
     for (int i = 1; i <= SAMPLES; i++) {
         double part = (double)i / SAMPLES;
@@ -150,15 +151,16 @@ static lm_status sample(const lm_gap *gap, piece p, sign *so_far, lm_points *lev
                                 : p.low + (p.high - p.low) * part;
         if (!(x > last))
             continue;
-        bool now = holds(lm_gap_value(gap, x, x == p.high ? LM_FROM_LEFT : LM_AT, NULL));
-        if (now != before)
-            LM_TRY(lm_points_add(levels, refine(gap, last, x, before)));
+        double now = lm_gap_value(gap, x, x == p.high ? LM_FROM_LEFT : LM_AT, NULL);
         if (!far)
-            search->resolution = fmax(search->resolution, (x - last) / gap->scale);
-        before = now;
+            search->resolution = fmax(search->resolution, (p.high - p.low) / SAMPLES / gap->scale);
+        if (now == 0)
+            continue;
+        if (*so_far != UNKNOWN && sign_of(now) != *so_far)
+            LM_TRY(lm_points_add(levels, refine(gap, last, x, *so_far == HELD)));
+        *so_far = sign_of(now);
         last = x;
     }
-    *so_far = before ? HELD : LOST;
     return LM_OK;
 }
 

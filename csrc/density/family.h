@@ -94,7 +94,7 @@ struct lm_family {
 /* The families: one line here, one file, one `const lm_family lm_family_<name>`. */
 #define LM_FAMILIES(X)                                                                                                 \
     X(gaussian) X(laplace) X(student_t) X(cauchy) X(uniform) X(exponential) X(gamma) X(chi_square) X(poisson)          \
-    X(point) X(from_readings)
+    X(point) X(from_readings) X(custom)
 
 #define LM_DECLARE(name) extern const lm_family lm_family_##name;
 LM_FAMILIES(LM_DECLARE)

@@ -57,6 +57,9 @@ def spline(
     about: tuple[float, tuple[float, float], tuple[float, float], float],
     /,
 ) -> Any: ...
+def custom(
+    type: type, logpdf: Any, low: float, high: float, function: Any, /
+) -> Any: ...
 def pareto_tail(
     readings: NDArray[np.float64], threshold: float, /
 ) -> tuple[float, float, float, float, float, float]: ...
