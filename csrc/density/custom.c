@@ -9,6 +9,7 @@
 #include <float.h>
 #include <math.h>
 #include <stdlib.h>
+#include <string.h>
 
 #include "../numeric/constants.h"
 #include "../numeric/fault.h"
@@ -374,11 +375,9 @@ static lm_status integrate_outwards(law *l, const place *from, int side)
         double outer = from->at + sign * from->width * ldexp(1, k > 2100 ? 2100 : k);
         bool last = !(sign * (edge - outer) > 0);
         outer = last ? edge : outer;
-        size_t count = l->table.count;
+        l->table.log_sum = -INFINITY;
         LM_TRY(integrate(l, fmin(inner, outer), fmax(inner, outer), &l->table));
-        double mass = -INFINITY;
-        for (size_t i = count; i < l->table.count; i++)
-            mass = lm_log_add(mass, l->table.panel[i].log_mass);
+        double mass = l->table.log_sum;
         if (!last && mass > -INFINITY && before < INFINITY)
             ratio = mass - before;
         inner = outer;
@@ -422,6 +421,20 @@ static lm_status integrate_between(law *l, const place *a, const place *b)
 
 static double far_tail(const law *l, double x, int side);
 
+/* In order, without the rough panels at the ends. */
+static void trim_table(law *l)
+{
+    lm_log_panel *panel = l->table.panel;
+    size_t first = 0, last = l->table.count;
+    qsort(panel, last, sizeof *panel, by_low);
+    while (last > 1 && panel[last - 1].log_mass < TABLE_FLOOR)
+        last--;
+    while (first + 1 < last && panel[first].log_mass < TABLE_FLOOR)
+        first++;
+    memmove(panel, panel + first, (last - first) * sizeof *panel);
+    l->table.count = last - first;
+}
+
 static lm_status find_mass(law *l, lm_fault *fault)
 {
     const char *wanted = "a density that integrates to 1 over its support";
@@ -431,9 +444,9 @@ static lm_status find_mass(law *l, lm_fault *fault)
     for (size_t k = 0; k + 1 < l->places; k++)
         LM_TRY(integrate_between(l, &l->place[k], &l->place[k + 1]));
     LM_TRY(integrate_outwards(l, &l->place[l->places - 1], 1));
+    trim_table(l);
     size_t n = l->table.count;
-    lm_log_panel *panel = l->table.panel;
-    qsort(panel, n, sizeof *panel, by_low);
+    const lm_log_panel *panel = l->table.panel;
     for (int side = 0; side < 2; side++) {
         double end = side == 0 ? panel[0].low : panel[n - 1].high;
         if (l->log_beyond[side] == -INFINITY)
@@ -561,19 +574,17 @@ static double far_tail(const law *l, double x, int side)
     }
     double total = -INFINITY, inner = x;
     for (int k = 0; k < 2100 && inner != edge; k++) {
-        double outer = x + sign * width * ldexp(1, k < 1020 ? k : 1020), mass = -INFINITY;
+        double outer = x + sign * width * ldexp(1, k < 1020 ? k : 1020);
         outer = sign * (edge - outer) > 0 ? outer : edge;
         lm_log_panels panels = LM_NO_PANELS;
         panels.most = 200;
+        panels.sum_only = true;
         lm_status status = lm_log_integrate(evaluate, l, fmin(inner, outer), fmax(inner, outer),
                                             fmax(total, start + log(width) - 5) - 45, &panels);
-        for (size_t i = 0; i < panels.count; i++)
-            mass = lm_log_add(mass, panels.panel[i].log_mass);
-        lm_log_panels_free(&panels);
         if (status != LM_OK)
             return NAN;
-        total = lm_log_add(total, mass);
-        if (mass < total - 42)
+        total = lm_log_add(total, panels.log_sum);
+        if (panels.log_sum < total - 42)
             break;
         inner = outer;
         if (inner == edge && fabs(edge) == FARTHEST && l->tail_index[side] > 0 && isfinite(l->tail_index[side])) {

@@ -65,6 +65,9 @@ bool lm_log_rule(lm_log_function f, const void *context, double low, double high
 
 static lm_status keep(lm_log_panels *panels, lm_log_panel panel)
 {
+    panels->log_sum = lm_log_add(panels->log_sum, panel.log_mass);
+    if (panels->sum_only)
+        return LM_OK;
     if (panels->count == panels->capacity) {
         size_t capacity = panels->capacity > 0 ? 2 * panels->capacity : 64;
         lm_log_panel *more = lm_reallocate(panels->panel, capacity, sizeof *more);
@@ -102,8 +105,8 @@ lm_status lm_log_integrate(lm_log_function f, const void *context, double low, d
         if (!apply(f, context, p.low, p.high, &log_mass, &error, &noise))
             return LM_CALLBACK;
         bool good = isinf(log_mass) || log_mass < log_floor || error <= enough + noise;
-        bool narrow =
-            p.high - p.low <= 8 * DBL_EPSILON * fmax(fabs(p.low), fabs(p.high)) || !(middle > p.low && middle < p.high);
+        bool narrow = p.high - p.low <= fmax(8 * DBL_EPSILON * fmax(fabs(p.low), fabs(p.high)), 0x1p-1030) ||
+                      !(middle > p.low && middle < p.high);
         if (good || narrow || panels->tried > panels->most || depth + 2 > DEPTH) {
             if (!good)
                 panels->log_error = lm_log_add(panels->log_error, log_mass + log(error));

@@ -17,10 +17,12 @@ typedef struct {
     lm_log_panel *panel;
     size_t count, capacity;
     size_t tried, most; /* rules applied so far, and how many there may be before halving ends */
+    double log_sum;     /* of all the panels added */
+    bool sum_only;      /* the panels themselves are not kept, so that no memory is asked for */
     double log_error;   /* of panels that were as narrow as doubles allow, or came when too many had been tried */
 } lm_log_panels;
 
-#define LM_NO_PANELS ((lm_log_panels){.most = 40000, .log_error = -INFINITY})
+#define LM_NO_PANELS ((lm_log_panels){.most = 40000, .log_sum = -INFINITY, .log_error = -INFINITY})
 
 /* Log of the integral over [low, high] by 15 points, and how far 7 of them are off, as a part of it. False where f
  * failed. */
