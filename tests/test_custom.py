@@ -122,6 +122,16 @@ def test_soft_values_and_posteriors():
     np.testing.assert_allclose(states.posterior(x), exact.posterior(x), rtol=1e-9)
 
 
+def test_beyond_all_supports_as_for_families():
+    ours = lm.States({"a": lm.custom(np.zeros_like, (0, 1)), "b": lm.uniform(0.0, 2.0)})
+    exact = lm.States({"a": lm.uniform(0.0, 1.0), "b": lm.uniform(0.0, 2.0)})
+    x = [-1.0, 0.5, 1.5, 5.0, np.nan]
+    np.testing.assert_array_equal(ours.llr(x, "a", "b"), exact.llr(x, "a", "b"))
+    np.testing.assert_array_equal(ours.soft("a", "b")(x), exact.soft("a", "b")(x))
+    np.testing.assert_allclose(ours.posterior(x), exact.posterior(x), rtol=1e-15)
+    assert lm.bayes(ours).levels.tolist() == lm.bayes(exact).levels.tolist()
+
+
 class Unheard(Exception):
     """An exception that nobody but the callback could have raised."""
 
@@ -154,6 +164,17 @@ def test_a_function_that_fails_ends_the_work_with_its_reason(logpdf, exception, 
 def test_supports_that_are_no_interval(support):
     with pytest.raises(ValueError, match="support"):
         lm.custom(standard_normal, support)
+
+
+def test_a_second_opinion():
+    d = lm.custom(standard_normal, cdf=stats.norm.cdf)
+    assert d == lm.custom(standard_normal)
+    with pytest.raises(ValueError, match="cdf is .* expected the integral"):
+        lm.custom(standard_normal, cdf=stats.norm(0.0, 1.1).cdf)
+    with pytest.raises(ValueError, match="cdf is nan"):
+        lm.custom(standard_normal, cdf=lambda x: np.full_like(x, np.nan))
+    with pytest.raises(TypeError, match="cdf"):
+        lm.custom(standard_normal, cdf=1.0)
 
 
 def test_arguments_of_another_kind():
