@@ -29,6 +29,11 @@ def test_awkward_mixtures(seed):
     assert_found(other.awkward_problem(np.random.default_rng(seed)))
 
 
+@pytest.mark.parametrize("seed", [12, 151, 258, 1378, 1897, 2034, 2411, 2632, 3036, 25325, 284837])
+def test_awkward_mixtures_that_once_failed(seed):
+    assert_found(other.awkward_problem(np.random.default_rng(seed)))
+
+
 @pytest.mark.slow
 def test_more_random_mixtures():
     """`python tests/reference/levels.py --count 10000` tries as many as one has time for."""
@@ -61,6 +66,13 @@ HARD = {
          [0.5509516958792019, 6.17698465641759e-09, 1.4143820539228156, 0.6670138861291666]),
         ([0.9999999999995882, 4.1179328350686923e-13], [0.6467852518123148, -7.573042822723486],
          [0.6670138714986149, 0.5509506551347862])]), 2),
+    # Products of small slopes and small weights underflowed and a slope of two signs passed for one.
+    "slopes of 1e-30": (other.Problem([0.5, 0.5], [
+        ([0.9999999985209463, 1.4790536444780513e-09], [-9.999999989112965e+35, -1.0000000160291218e+36],
+         [1.8943480107498003e+29, 1.1175380700487687e+25]),
+        ([0.23549932879837046, 0.2538452153618917, 0.26778024023833746, 0.24287521560140046],
+         [-9.999999989112965e+35, -1.0000000106235685e+36, -1.0000000160291218e+36, -1.0000000160291218e+36],
+         [4.489892507421543e+30, 8.080783955189661e+30, 1.1175380700487687e+25, 1.8943480107498003e+29])]), 4),
     "narrow beside wide": (other.Problem([0.5, 0.5], [   # distances to the far mean must not enter the near levels
         ([0.9, 0.1], [1.0, 30.0], [1e-6, 2.0]), ([0.5, 0.5], [-30.0, 40.0], [20.0, 1.0])]), 4),
     "close pairs": (other.Problem([0.5, 0.5], [one(0.0, 1.0), ([0.5, 0.5], [-1.0, 1.0], [1e-4, 1e-4])]), 4),

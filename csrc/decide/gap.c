@@ -232,29 +232,32 @@ static double extreme_mean(const lm_gap_bound bound[], size_t n, size_t order[],
                 order[at] = order[at - 1];
             }
             order[at] = i;
-            top = fmax(top, bound[i].ratio.high);
+            top = fmax(top, bound[i].ratio.low);
         }
+    /* Slopes in units of the largest, weights in units of the largest least one, so that they sum to 1 at least and
+     * what underflows is below the rounding added in the end; one beyond exp(MOST) outweighs all others by more than
+     * that as it is. */
+    enum { MOST = 600 };
 #define STEEP(k)                                                                                                       \
     (largest ? (in_u ? bound[order[k]].slope_u.high : bound[order[k]].slope.high)                                      \
              : -(in_u ? bound[order[k]].slope_u.low : bound[order[k]].slope.low))
-    double best = STEEP(0);
-    if (count > 1 && isfinite(top)) {
+    double best = STEEP(0), unit = fmax(fabs(STEEP(0)), fabs(STEEP(count - 1)));
+    if (count > 1 && isfinite(top) && isfinite(unit) && unit > 0) {
         double weights = 0, moment = 0;
         for (size_t k = 0; k < count; k++) {
             double w = exp(bound[order[k]].ratio.low - top);
             weights += w;
-            moment += w == 0 ? 0 : w * STEEP(k);
+            moment += w * (STEEP(k) / unit);
         }
         best = -INFINITY;
         for (size_t k = 0; k < count; k++) {
-            double more = exp(bound[order[k]].ratio.high - top) - exp(bound[order[k]].ratio.low - top);
+            const lm_range *ratio = &bound[order[k]].ratio;
+            double more = exp(fmin(ratio->high - top, MOST)) - exp(ratio->low - top);
             weights += more;
-            moment += more == 0 ? 0 : more * STEEP(k);
-            double mean = moment / weights;
-            best = isnan(mean) ? STEEP(0) : fmax(best, mean);
+            moment += more * (STEEP(k) / unit);
+            best = fmax(best, moment / weights);
         }
-        best += NOISE * (double)count * fmax(fabs(STEEP(0)), fabs(STEEP(count - 1)));
-        best = fmin(best, STEEP(0));
+        best = fmin((best + NOISE * (double)count) * unit, STEEP(0));
     }
 #undef STEEP
     return largest ? best : -best;

@@ -83,7 +83,14 @@ class Gap:
         """log of the positive sum over the negative one, at each x."""
         x = np.asarray(x, LONG)
         size = np.log(self.weight / self.sd)[:, None] - ((x - self.mean[:, None]) / self.sd[:, None]) ** 2 / 2
-        parts = self.ratio(np.arange(len(self.mean))[:, None], size.argmax(0)[None], x)
+        every, largest = np.arange(len(self.mean))[:, None], size.argmax(0)
+        parts = self.ratio(every, largest, x)
+        for _ in self.mean:     # where the sizes are huge, rounding may have hidden which is largest; ratios know
+            wrong = parts.max(0) > 1
+            if not wrong.any():
+                break
+            largest[wrong] = parts[:, wrong].argmax(0)
+            parts[:, wrong] = self.ratio(every, largest[wrong], x[wrong])
         with np.errstate(under="ignore"):
             return log_sum(parts[self.positive]) - log_sum(parts[~self.positive])
 
@@ -120,6 +127,8 @@ class Gap:
                 marks += [self.mean[b] + q / quad, self.mean[b] + free / q, self.mean[b] - half[None] / quad]
         marks = np.concatenate(marks)
         marks = np.unique(marks[np.isfinite(marks) & (np.abs(marks) < np.finfo(float).max)])
+        far = marks[-1] - marks[0] + np.abs(marks).max() * LONG(1e-15)    # the outermost may be roots themselves
+        marks = np.concatenate([[marks[0] - far], marks, [marks[-1] + far]])
         return np.unique(np.append((marks[:-1, None] + np.diff(marks)[:, None] * BETWEEN).ravel(), marks[-1]))
 
     def brackets(self):
@@ -162,19 +171,30 @@ class Gap:
             after = (self.value(x.ravel()).reshape(x.shape) >= 0) == rises
             k = np.maximum(after.argmax(0), 1)
             low, high = x[k - 1, np.arange(len(k))], x[k, np.arange(len(k))]
-        return [self.settle(x, up) for x, up in zip((low + high) / 2, rises)]
+        settled = [self.settle(*sides) for sides in zip(low, high, found, rises)]
+        return [root for root in settled if root]
 
-    def settle(self, start, rises):
+    def settle(self, low, high, outer, rises):
+        """Newton's steps at 50 digits, halving where they leave the bracket."""
         with mpmath.workdps(DIGITS):
-            x = exact(start)
-            for _ in range(30):
+            low, high = exact(low), exact(high)
+            room = max(abs(low), abs(high)) * exact(np.finfo(LONG).eps)     # an end may be the root itself
+            for attempt in range(45):
+                if (self.exactly(low)[0] < 0) == rises and (self.exactly(high)[0] >= 0) == rises:
+                    break
+                low, high = (low, high) if attempt else map(exact, outer)
+                low, high, room = low - room, high + room, 2 * room
+            else:     # the search saw its own rounding, which is far below that of doubles
+                assert abs(self.exactly(low)[0]) < EPS / 16, "mpmath does not confirm a root of the search"
+                return None
+            x = (low + high) / 2
+            while True:
                 h, slope, noise = self.exactly(x)
+                low, high = (x, high) if (h < 0) == rises else (low, x)
                 step = h / slope
-                x -= step
                 if abs(step) < abs(x) * mpmath.mpf(10) ** -25:
                     break
-            assert (slope > 0) == rises and abs(x - exact(start)) <= 1e-12 * abs(x) + abs(noise / slope), \
-                "mpmath does not confirm a root of the extended search"
+                x = x - step if low < x - step < high else (low + high) / 2
             level = float(x)
             level = level if level >= x else np.nextafter(level, np.inf)
             return float(level), float(4 * EPS * abs(x) + noise / abs(slope))
@@ -182,8 +202,9 @@ class Gap:
 
 def exact(x):
     """A longdouble as an mpf."""
-    high = float(x)
-    return mpmath.mpf(high) + mpmath.mpf(float(x - LONG(high)))
+    mantissa, exponent = np.frexp(x)
+    high = float(mantissa)
+    return mpmath.ldexp(mpmath.mpf(high) + mpmath.mpf(float(mantissa - LONG(high))), int(exponent))
 
 
 def log_sum(parts):
