@@ -17,6 +17,18 @@ def assert_found(problem):
     return count
 
 
+def test_the_comparison_sees_wrong_rules(monkeypatch):
+    """A level left out with its interval, one put in, one moved by 40 units in the last place, decisions swapped."""
+    problem = HARD["close pairs"][0]
+    right, names = problem.rule(), problem.states().names
+    levels, decisions = right.levels.tolist(), right.decisions.tolist()
+    for wrong in (([levels[0], *levels[3:]], decisions[:3]), ([*levels, 3.0, 3.5], [*decisions, 1, 0]),
+                  ([levels[0] * (1 + 40 * 2.0**-52), *levels[1:]], decisions), (levels, [1 - d for d in decisions])):
+        monkeypatch.setattr(other.Problem, "rule", lambda self, wrong=wrong: lm.rule(*wrong, names))
+        missed, invented, _, agree = other.compare(problem)
+        assert missed or invented or not agree
+
+
 @given(some.integers(0, 2**63))
 @settings(derandomize=True, max_examples=50, deadline=None, suppress_health_check=list(HealthCheck))
 def test_random_mixtures(seed):

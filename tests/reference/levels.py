@@ -222,11 +222,7 @@ def levels(problem):
             roots.update(gap.roots())     # of two roots between the same doubles, either will do
     roots = sorted(roots.items())
     at = np.array([x for x, _ in roots])
-    if len(at):     # a reading of each interval
-        middles = np.clip((at[1:] + at[:-1]) / 2, at[:-1], np.nextafter(at[1:], -np.inf))
-        middles = np.concatenate([[at[0] - 1 - abs(at[0])], middles, [at[-1] + 1 + abs(at[-1])]])
-    else:
-        middles = np.zeros(1)
+    middles = readings_between(at)
     best = np.zeros(len(middles), int)
     for e in range(1, len(cost)):
         for k, x in enumerate(middles):
@@ -250,23 +246,35 @@ def compare(problem):
             found.remove(nearest)
         else:
             missed.append(x)
-    if len(missed) > 1 or len(found) > 1:     # a pair that rounding cannot tell from a touch may be there or not
-        missed, found = [[x for x in some if not hidden(gaps, some, x)] for some in (missed, found)]
-        agree |= not missed and not found
+    if (missed or found or not agree) and alike(rule, [x for x, _ in wanted], decisions, gaps):
+        return [], [], len(wanted), True
     return missed, found, len(wanted), agree
 
 
-def hidden(gaps, pair, x):
-    """Whether the gap stays within rounding all the way from x to another level of the list."""
+def alike(rule, other_levels, other_decisions, gaps):
+    """Whether the gap is within rounding wherever the two decide differently: a touch, or laws that nearly tie."""
+    at = np.unique(np.concatenate([rule.levels, other_levels]))
+    looks = readings_between(at)
+    ours, theirs = rule(looks), np.array(other_decisions)[np.searchsorted(other_levels, looks, side="right")]
     with mpmath.workdps(DIGITS):
-        for other in pair:
-            for gap in gaps.values():
-                if other == x or gap.one_signed():
-                    continue
-                looks = [gap.exactly(mpmath.mpf(x) + (mpmath.mpf(other) - x) * k / 8) for k in range(9)]
-                if all(abs(h) <= noise for h, _, noise in looks):
-                    return True
-    return False
+        for x, pair in zip(looks, np.sort([ours, theirs], axis=0).T):
+            if pair[0] != pair[1]:
+                gap = gaps[tuple(pair.tolist())]
+                if gap.one_signed():
+                    return False
+                h, _, noise = gap.exactly(mpmath.mpf(float(x)))
+                if abs(h) > noise:
+                    return False
+    return True
+
+
+def readings_between(levels):
+    """A reading of each interval."""
+    at = np.asarray(levels, float)
+    if not len(at):
+        return np.zeros(1)
+    middles = np.clip((at[1:] + at[:-1]) / 2, at[:-1], np.nextafter(at[1:], -np.inf))
+    return np.concatenate([[at[0] - 1 - abs(at[0])], middles, [at[-1] + 1 + abs(at[-1])]])
 
 
 def random_problem(rng):
