@@ -191,13 +191,13 @@ class Gap:
             while True:
                 h, slope, noise = self.exactly(x)
                 low, high = (x, high) if (h < 0) == rises else (low, x)
-                step = h / slope
-                if abs(step) < abs(x) * mpmath.mpf(10) ** -25:
+                step = h / slope if slope else high - low
+                if h == 0 or abs(step) < abs(x) * mpmath.mpf(10) ** -25:
                     break
                 x = x - step if low < x - step < high else (low + high) / 2
             level = float(x)
             level = level if level >= x else np.nextafter(level, np.inf)
-            return float(level), float(4 * EPS * abs(x) + noise / abs(slope))
+            return float(level), float(4 * EPS * abs(x) + noise / abs(slope)) if slope else np.inf
 
 
 def exact(x):
